@@ -1,0 +1,1 @@
+"""From measured physiology and ocean files to the depths where an animal can breathe."""
