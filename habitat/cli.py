@@ -1,0 +1,131 @@
+"""The command line: doors only. Imports happen inside the commands, so that --help is instant."""
+
+import signal
+import sys
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+app = typer.Typer(
+    add_completion=False,
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    help="From measured physiology and ocean files to the depths where an animal can breathe.",
+    epilog="Viable water is where the measured animal could breathe; it is not a statement that the animal is there.",
+)
+
+_CHOICE = "Name of the variable or column that holds it, when a file has several."
+
+
+@app.command(epilog="Example: habitat study examples/basin.toml --out results")
+def study(
+    study_file: Annotated[
+        Path, typer.Argument(metavar="STUDY.toml", help="The question: ocean, species, scenarios, regions.")
+    ],
+    out: Annotated[
+        Path | None, typer.Option(help="Folder for the results, instead of the one the study names.")
+    ] = None,
+) -> None:
+    """Run a whole study and write tables, figures, methods and a record into one folder."""
+    from habitat.study import run_study
+
+    folder = run_study(study_file, out)
+    print(f"results in {folder}: start with findings.md and methods.md", file=sys.stderr)
+
+
+@app.command(
+    epilog="Examples: habitat bands cast.csv --species prawn.toml --activity 1,2.5   "
+    "habitat bands grid.nc --species prawn.toml --out bands.nc --uncertainty"
+)
+def bands(
+    ocean: Annotated[
+        list[Path], typer.Argument(metavar="OCEAN...", help="Casts (CSV, WHP-Exchange) or a netCDF grid.")
+    ],
+    species: Annotated[Path, typer.Option(metavar="S.toml", help="Species file.")],
+    activity: Annotated[str, typer.Option(help="Activity factors, separated by commas.")] = "1",
+    out: Annotated[
+        Path | None, typer.Option(help="FILE.csv for a table; FILE.nc for a grid. Without it: standard output.")
+    ] = None,
+    uncertainty: Annotated[
+        bool, typer.Option("--uncertainty", help="Add quantile edges and mean thickness to FILE.nc.")
+    ] = False,
+    chance: Annotated[
+        bool, typer.Option("--chance", help="Add the chance of viability of every cell to FILE.nc.")
+    ] = False,
+    hydrostatic: Annotated[bool, typer.Option(help="Include the hydrostatic term in PO2.")] = True,
+    temperature: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+    salinity: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+    oxygen: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+) -> None:
+    """Find the viable bands of casts or of a grid."""
+    from habitat.bandfile import write_bands
+
+    choose = _chosen(temperature=temperature, salinity=salinity, oxygen=oxygen)
+    factors = _activities(activity)
+    write_bands(
+        ocean, species, factors, out, choose=choose, hydrostatic=hydrostatic, uncertainty=uncertainty, chance=chance
+    )
+
+
+@app.command(epilog="Example: habitat inspect cruise_hy1.csv")
+def inspect(
+    file: Annotated[Path, typer.Argument(metavar="FILE", help="An ocean file of any kind.")],
+    temperature: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+    salinity: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+    oxygen: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
+) -> None:
+    """Say what a file is, which variable plays which part, and what is missing or suspicious."""
+    from habitat.ocean import inspect as inspection
+
+    print(inspection(file, choose=_chosen(temperature=temperature, salinity=salinity, oxygen=oxygen)))
+
+
+def _chosen(**names: str | None) -> dict[str, str]:
+    return {role: name for role, name in names.items() if name is not None}
+
+
+def _activities(text: str) -> list[float]:
+    try:
+        factors = [float(part) for part in text.split(",")]
+    except ValueError:
+        factors = []
+    if not factors or not all(0 < factor < float("inf") for factor in factors) or len(set(factors)) < len(factors):
+        message = f"'{text}': expected different numbers above 0, separated by commas, for example 1,2.5"
+        raise typer.BadParameter(message, param_hint="--activity")
+    return factors
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from importlib.metadata import version
+
+        print(f"habitat {version('habitat')}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[
+        bool, typer.Option("--version", is_eager=True, callback=_show_version, help="Show the version.")
+    ] = False,
+) -> None:
+    pass
+
+
+def main() -> None:
+    """Run the command line; an error the user can cause is one message and exit status 1."""
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))  # so that unfinished output is removed
+    try:
+        app()
+    except KeyboardInterrupt:
+        print("habitat: interrupted; nothing was written", file=sys.stderr)
+        sys.exit(130)
+    except Exception as error:
+        from habitat.errors import HabitatError
+
+        if not isinstance(error, HabitatError):
+            raise
+        print(f"habitat: {error}", file=sys.stderr)
+        sys.exit(1)
