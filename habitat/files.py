@@ -26,7 +26,7 @@ def read_toml(path: str | Path) -> dict[str, Any]:
     """
     path = Path(path)
     try:
-        return tomllib.loads(path.read_text(encoding="utf-8"))
+        return tomllib.loads(path.read_text(encoding="utf-8-sig"))  # some editors put a byte-order mark first
     except FileNotFoundError:
         raise missing_file(path) from None
     except OSError as error:
@@ -117,10 +117,12 @@ def output_errors(path: str | Path) -> Iterator[None]:
             errno.EPERM: "no permission to write there: choose another place with --out",
             errno.EROFS: "that disk is read-only: choose another place with --out",
             errno.ENOENT: "the folder does not exist: create it, or choose another place with --out",
+            errno.EISDIR: "that is a folder: give the name of a file",
             errno.ENOTDIR: "a part of that path is a file: choose another place with --out",
         }
         found = f"cannot be written ({error.strerror or error})"
-        raise OutputError(found, where=str(path), remedy=remedies.get(error.errno or 0, "")) from None
+        remedy = remedies.get(error.errno or 0, "choose another place with --out")
+        raise OutputError(found, where=str(path), remedy=remedy) from None
 
 
 def _umask() -> int:

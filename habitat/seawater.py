@@ -18,7 +18,7 @@ import gsw
 import numpy as np
 import xarray as xr
 
-from habitat.units import oxygen_unit
+from habitat.units import UMOL_PER_ML, oxygen_unit
 
 OXYGEN_MOLE_FRACTION = 0.20946
 """Mole fraction of O2 in dry air [1] (Glueckauf 1951, as used by SCOR WG 142, doi:10.13155/45915)."""
@@ -44,7 +44,6 @@ IPTS68_PER_ITS90 = 1.00024
 _SOLUBILITY_A = (3.88767, -0.256847, 4.94457, 4.05010, 3.22014, 2.00907)
 _SOLUBILITY_B = (-8.17083e-3, -1.03410e-2, -7.37614e-3, -6.24523e-3)
 _SOLUBILITY_C0 = -4.88682e-7
-_UMOL_PER_ML = 44.6596
 
 
 def _elementwise(function: Callable[..., Any]) -> Callable[..., Any]:
@@ -65,7 +64,10 @@ def _elementwise(function: Callable[..., Any]) -> Callable[..., Any]:
         def compute(*values: Any) -> Any:
             plain = {name: _plain(value) for name, value in zip(given, values, strict=True)}
             with np.errstate(all="ignore"):
-                return np.asarray(function(**plain, **fixed), dtype=float)[()]
+                result = np.asarray(function(**plain, **fixed), dtype=float)
+            # A formula may not need every argument (umol/kg needs no temperature); lazy arrays count on the full shape.
+            shape = np.broadcast_shapes(*(value.shape for value in plain.values()))
+            return (result if result.shape == shape else np.broadcast_to(result, shape).copy())[()]
 
         inputs = [bound.arguments[name] for name in given]
         if any(isinstance(value, xr.DataArray | xr.Variable | xr.Dataset) for value in inputs):
@@ -115,7 +117,7 @@ def absolute_salinity(salinity, pressure, longitude=None, latitude=None):
     if longitude is None or latitude is None:
         return reference
     exact = gsw.SA_from_SP(salinity, pressure, longitude, latitude)
-    return np.where(np.isfinite(exact), exact, reference)
+    return np.where(np.isnan(exact) & np.isfinite(pressure), reference, exact)
 
 
 @_elementwise
@@ -125,7 +127,7 @@ def practical_salinity_from_absolute(absolute, pressure, longitude=None, latitud
     if longitude is None or latitude is None:
         return reference
     exact = gsw.SP_from_SA(absolute, pressure, longitude, latitude)
-    return np.where(np.isfinite(exact), exact, reference)
+    return np.where(np.isnan(exact) & np.isfinite(pressure), reference, exact)
 
 
 @_elementwise
@@ -206,7 +208,7 @@ def solubility_per_volume(temperature, salinity):
     """
     scaled = np.log((298.15 - IPTS68_PER_ITS90 * temperature) / (ZERO_CELSIUS + IPTS68_PER_ITS90 * temperature))
     fresh, haline = np.polyval(_SOLUBILITY_A, scaled), np.polyval(_SOLUBILITY_B, scaled)
-    return _UMOL_PER_ML * np.exp(fresh + salinity * haline + _SOLUBILITY_C0 * salinity**2)
+    return UMOL_PER_ML * np.exp(fresh + salinity * haline + _SOLUBILITY_C0 * salinity**2)
 
 
 @_elementwise

@@ -7,6 +7,7 @@ concentration to partial pressure) is in `habitat.seawater`.
 
 import functools
 import re
+import unicodedata
 from dataclasses import dataclass
 from typing import Literal
 
@@ -21,63 +22,29 @@ UMOL_PER_ML = 44.6596
 """Amount of O2 in one millilitre of the real gas at 0 degC and 1 atm [umol/ml]: 1000 / 22.3916 l/mol, as used by the
 SCOR WG 142 recommendation (doi:10.13155/45915)."""
 
-# Spellings that the registry does not know, from netCDF conventions, hydrographic exchange files and laboratory
-# tables. Keys are compared after lower-casing and with runs of blanks made one; values are the registry's grammar.
+# Whole units that the registry does not know, or knows as something else (psu, mb, mm Hg), from netCDF conventions,
+# hydrographic exchange files and laboratory tables. Keys are in lower case; values are the registry's grammar.
 SPELLINGS = {
-    "its-90": "degC",
-    "its90": "degC",
-    "ipts-68": "degC",
-    "ipts68": "degC",
-    "its-68": "degC",
-    "deg c": "degC",
-    "deg_c": "degC",
-    "degc": "degC",
-    "c": "degC",
-    "°c": "degC",
-    "ºc": "degC",
-    "celsius": "degC",
-    "degrees celsius": "degC",
-    "degree_c": "degC",
-    "degrees_c": "degC",
-    "degrees_celsius": "degC",
-    "degree_celsius": "degC",
-    "k": "kelvin",
-    "kelvin": "kelvin",
-    "degk": "kelvin",
-    "deg f": "degF",
-    "degf": "degF",
+    "1": "dimensionless",
+    "pss": "dimensionless",
     "pss-78": "dimensionless",
     "pss78": "dimensionless",
     "psu": "dimensionless",
-    "1": "dimensionless",
     "practical salinity": "dimensionless",
+    "practical salinity units": "dimensionless",
     "0.001": "dimensionless",  # the practical scale written as parts per thousand
     "1e-3": "dimensionless",
     "1e-03": "dimensionless",
-    "g kg-1": "g/kg",
-    "umol/kg": "umol/kg",
-    "micromol/kg": "umol/kg",
-    "umol/l": "umol/l",
-    "mmol/m3": "mmol/m**3",
-    "ml/l": "ml/l",
-    "mg/l": "mg/l",
-    "um": "umol/l",
-    "dbar": "dbar",
-    "dbars": "dbar",
+    "ppt": "dimensionless",
+    "‰": "dimensionless",
+    "um": "umol/l",  # micromolar, not micrometre
     "db": "dbar",
-    "decibars": "dbar",
-    "decibar": "dbar",
-    "m": "m",
-    "meters": "m",
-    "metres": "m",
-    "metre": "m",
+    "dbars": "dbar",
+    "mb": "mbar",
     "torr": "mmHg",
     "mmhg": "mmHg",
-    "kpa": "kPa",
-    "hpa": "hPa",
-    "mbar": "mbar",
-    "atm": "atm",
-    "pa": "Pa",
+    "mm hg": "mmHg",
+    "m": "m",  # a capital M in a depth column is no molar
     "% saturation": "percent",
     "%saturation": "percent",
     "% sat": "percent",
@@ -86,6 +53,17 @@ SPELLINGS = {
     "% air saturation": "percent",
     "% a.s.": "percent",
 }
+
+# Typographic variants; micro signs and superscripts are already plain letters and digits by then.
+_TYPOGRAPHY = str.maketrans({"μ": "u", "−": "-", "–": "-", "⋅": "·", "{": None, "}": None})
+
+_TEMPERATURE = re.compile(r"(?:°|deg(?:ree)?s?)?[ ._]*(c|k|f|celsius|kelvin|fahrenheit)", re.IGNORECASE)
+_TEMPERATURE_NAMES = {"c": "degC", "k": "kelvin", "f": "degF"}
+
+# Remarks on the scale or on what is measured, which do not change the unit: "ITS-90, deg C", "mg O2/l", "ml(STP)/l".
+# They must follow a letter, so that "% O2", which may be a share of a gas mixture, stays unknown.
+_SCALE = re.compile(r"[ ,]*\(?\bIP?TS-?(?:68|90)\b\)?[ ,]*", re.IGNORECASE)
+_SUBSTANCE = re.compile(r"(?<=[a-zL])[ _]?\(?(?:[Oo]2|(?i:ntp|stpd?))(?![A-Za-z0-9])\)?")
 
 OXYGEN_UNITS = "umol/kg, umol/l, mmol/m3, mol/m3, ml/l, mg/l, % saturation, kPa, mbar, hPa, atm or mmHg"
 
@@ -138,15 +116,20 @@ def parse_unit(text: str) -> pint.Unit:
     UnitError
         The text is empty or no known unit.
     """
-    spelled = re.sub(r"\s+", " ", text.strip()).replace("μ", "u").replace("µ", "u")
+    spelled = _plain_spelling(text)
     if not spelled:
         raise UnitError("no unit given", remedy="state it, for example 'oxygen [umol/kg]'")
-    known = SPELLINGS.get(spelled.lower())
-    candidates = [known] if known else [_grammar(spelled), _grammar(spelled.lower())]
+    temperature = _TEMPERATURE.fullmatch(spelled)
+    if temperature:
+        candidates = [_TEMPERATURE_NAMES[temperature[1][0].lower()]]
+    elif spelled.lower() in SPELLINGS:
+        candidates = [SPELLINGS[spelled.lower()]]
+    else:
+        candidates = [_grammar(spelled), _grammar(spelled.lower())]
     for candidate in candidates:
         try:
             return _registry().parse_units(candidate)
-        except Exception:  # noqa: BLE001, S112 - the parser raises many kinds, down to tokenizer errors
+        except Exception:  # the parser raises many kinds, down to tokenizer errors
             continue
     raise UnitError(f"unit '{text}' is not known", remedy="check its spelling, for example umol/kg, ml/l, degC, dbar")
 
@@ -166,7 +149,7 @@ def oxygen_unit(text: str) -> OxygenUnit:
     """
     unit = parse_unit(text)
     registry = _registry()
-    if unit in (registry.percent, registry.dimensionless):
+    if unit == registry.percent or text.strip() == "1":  # other dimensionless spellings are of salinity
         return OxygenUnit("saturation", float((1 * unit).to("dimensionless").magnitude))
     if unit.is_compatible_with("kPa"):
         return OxygenUnit("partial pressure", float((1 * unit).to("kPa").magnitude))
@@ -236,9 +219,24 @@ def _plain(name: str) -> str:
     return re.sub(r"[\s\-_]+", "_", name.strip().lower())
 
 
+def _plain_spelling(text: str) -> str:
+    """Undo what writing adds to a unit: typography, capitals, brackets, and remarks that do not change it."""
+    plain = unicodedata.normalize("NFKC", text.replace("º", "°")).translate(_TYPOGRAPHY)
+    plain = re.sub(r"\s+", " ", plain).strip()
+    plain = re.sub(r"^[\[(]\s*([^\[\]()]*?)\s*[\])]$", r"\1", plain)
+    if plain.isupper():  # capitals throughout are a habit of old tables, not mega-, gauss or henry
+        plain = plain.lower()
+    if _SCALE.search(plain):
+        plain = _SCALE.sub("", plain) or "degC"
+    return _SUBSTANCE.sub("", plain)
+
+
 def _grammar(text: str) -> str:
+    """Write a spelled unit in the registry's grammar."""
     text = re.sub(r"_per_|\s+per\s+", "/", text)
-    text = re.sub(r"(?<=[A-Za-z])\^?(-?\d+)", r"**\1", text)
+    text = re.sub(r"\bM(?=(?:mol|[lLg]|bar)\b)", "m", text)  # nobody means mega- before these
+    text = re.sub(r"\b([kh]?)pa\b", lambda match: match[1].lower() + "Pa", text, flags=re.IGNORECASE)
+    text = re.sub(r"(?<=[A-Za-z])(?:\^| (?=-))?(-?\d+)", r"**\1", text)
     return re.sub(r"(?<=[\w%]) ?[ .·] ?(?=[A-Za-z])", "*", text)
 
 
