@@ -13,6 +13,9 @@ from habitat.errors import InputError
 EARTH_RADIUS = 6371.0
 """Radius of the sphere on which areas are computed [km]."""
 
+COORDINATE_DIGITS = 9
+"""Decimals of a degree that count: 0.1 mm on the ground."""
+
 EVERYWHERE = "everywhere"
 
 
@@ -37,7 +40,8 @@ class Region:
         if self.shape is None:
             return xr.ones_like(longitude, dtype=bool).drop_vars(longitude.coords)
         west = self.shape.bounds[0]
-        around = west + (longitude - west) % 360.0
+        around = west + (longitude - west).round(COORDINATE_DIGITS) % 360.0
+        around = around.round(COORDINATE_DIGITS)  # else rounding would put some points of the edge outside
         inside = shapely.intersects_xy(self.shape, around.to_numpy(), latitude.to_numpy())
         return xr.DataArray(inside, dims=longitude.dims)
 
@@ -48,13 +52,19 @@ def box(name: str, west: float, east: float, south: float, north: float) -> Regi
     Raises
     ------
     InputError
-        South is not below north, or a latitude is beyond 90 degrees.
+        South is not below north, a latitude is beyond 90 degrees, or west and east are the same.
     """
     if not -90 <= south < north <= 90:
         raise InputError(
             f"latitudes {south} to {north}",
             where=f"region '{name}'",
             expected="box = [west, east, south, north] with -90 <= south < north <= 90",
+        )
+    if not np.isfinite([west, east]).all() or west == east:
+        raise InputError(
+            f"longitudes {west} to {east}",
+            where=f"region '{name}'",
+            expected="two different meridians; [-180, 180] goes all the way round",
         )
     if west > east:
         east += 360.0
@@ -73,12 +83,13 @@ def read_polygons(path: str | Path, name: str) -> list[Region]:
     """
     path = Path(path)
     try:
-        content = json.loads(path.read_text(encoding="utf-8"))
+        content = json.loads(path.read_text(encoding="utf-8-sig"))
     except FileNotFoundError:
         raise InputError("file not found", where=str(path), remedy=f"check polygon in region '{name}'") from None
     except (OSError, ValueError) as error:
         raise InputError(f"not readable as GeoJSON ({error})", where=str(path)) from None
     features = content.get("features", [content]) if isinstance(content, dict) else []
+    features = [feature for feature in features or [] if isinstance(feature, dict)]
     regions = []
     for number, feature in enumerate(features, start=1):
         geometry = feature.get("geometry", feature)
@@ -98,6 +109,13 @@ def _shape(geometry: dict, path: Path, label: str) -> shapely.Geometry:
         shape = shapely.from_geojson(json.dumps(geometry))
     except shapely.GEOSException as error:
         raise InputError(f"polygon '{label}' is damaged ({error})", where=str(path)) from None
+    south, north = shape.bounds[1], shape.bounds[3]
+    if not -90 <= south <= north <= 90:
+        raise InputError(
+            f"polygon '{label}' reaches latitudes {south:g} to {north:g}",
+            where=str(path),
+            expected="positions as [longitude, latitude]",
+        )
     if not shapely.is_valid(shape):
         reason = shapely.is_valid_reason(shape)
         raise InputError(
@@ -114,7 +132,7 @@ def column_areas(columns: xr.Dataset) -> xr.DataArray | None:
     if columns.attrs.get("form") != "grid":
         return None
     south, north = _cell_limits(columns["latitude"].to_numpy(), limit=90.0)
-    west, east = _cell_limits(columns["longitude"].to_numpy(), limit=np.inf)
+    west, east = _cell_limits(np.unwrap(columns["longitude"].to_numpy(), period=360.0), limit=np.inf)
     band = EARTH_RADIUS**2 * np.abs(np.sin(np.deg2rad(north)) - np.sin(np.deg2rad(south)))
     area = band[:, None] * np.deg2rad(np.abs(east - west))[None, :]
     return xr.DataArray(area, dims=("latitude", "longitude"), attrs={"units": "km2", "long_name": "cell area"})
@@ -124,8 +142,9 @@ def _cell_limits(centres: np.ndarray, limit: float) -> tuple[np.ndarray, np.ndar
     """Limits half-way between centres; a lone centre stands for one degree."""
     centres = centres.astype(float)
     if centres.size == 1:
-        return centres - 0.5, centres + 0.5
-    middle = (centres[:-1] + centres[1:]) / 2
-    limits = np.concatenate([[1.5 * centres[0] - 0.5 * centres[1]], middle, [1.5 * centres[-1] - 0.5 * centres[-2]]])
-    limits = np.clip(limits, -limit, limit)
-    return limits[:-1], limits[1:]
+        limits = centres + np.array([-0.5, 0.5])
+    else:
+        middle = (centres[:-1] + centres[1:]) / 2
+        first, last = 1.5 * centres[0] - 0.5 * centres[1], 1.5 * centres[-1] - 0.5 * centres[-2]
+        limits = np.concatenate([[first], middle, [last]])
+    return np.clip(limits[:-1], -limit, limit), np.clip(limits[1:], -limit, limit)

@@ -27,6 +27,10 @@ SAMPLE_SIZE = 2**19
 """Cells of a large grid looked at to say what a rule does to PO2."""
 
 
+SAME_COORDINATE = 1e-4
+"""Coordinates this close are the same [degrees, or m]: files hold them with 4 bytes, or in another convention."""
+
+
 @dataclass(frozen=True)
 class FieldFile:
     """A change given as a variable of a netCDF file."""
@@ -58,7 +62,7 @@ class Change:
         UnitError
             There is no number, or the unit is not one of dissolved oxygen.
         """
-        match = re.fullmatch(r"\s*([-+]?[0-9.]+(?:[eE][-+]?\d+)?)\s*(\S.*?)\s*", text)
+        match = re.fullmatch(r"\s*((?>[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?))\s*(\S.*?)\s*", text)
         if match is None:
             raise UnitError(f"oxygen change '{text}'", expected='a number and a unit, for example "-10 umol/kg"')
         oxygen_unit(match[2])
@@ -76,11 +80,24 @@ class Scenario:
         Added to the in-situ temperature [degC]; a profile is linear between its depths [m] and constant beyond them.
     oxygen : str, Percent, Change or FieldFile
         One of `KEEP_RULES`, or a change of the oxygen concentration.
+
+    Raises
+    ------
+    InputError
+        `oxygen` is a text that is not one of `KEEP_RULES`.
     """
 
     name: str
     warming: float | tuple[tuple[float, float], ...] | FieldFile
     oxygen: str | Percent | Change | FieldFile
+
+    def __post_init__(self) -> None:
+        if isinstance(self.oxygen, str) and self.oxygen not in KEEP_RULES:
+            raise InputError(
+                f"oxygen rule '{self.oxygen}'",
+                where=f"scenario '{self.name}'",
+                expected=" or ".join(f"'{rule}'" for rule in KEEP_RULES),
+            )
 
 
 def apply(columns: xr.Dataset, scenario: Scenario) -> xr.Dataset:
@@ -192,7 +209,7 @@ def _oxygen_after(columns: xr.Dataset, warmed: xr.DataArray, rule: Any, notes: l
     oxygen = columns["oxygen"]
     place = [columns[name] for name in ("salinity", "pressure", "longitude", "latitude")]
     if rule == "keep concentration":
-        return oxygen + 0.0 * warmed  # missing where the warming is
+        return oxygen
     if isinstance(rule, Percent):
         return oxygen * (1.0 + rule.value / 100.0)
     if isinstance(rule, Change):
@@ -273,21 +290,32 @@ def _labelled(field: xr.DataArray, coords: dict[str, xr.DataArray], source: Fiel
 
 
 def _onto(field: xr.DataArray, columns: xr.Dataset, source: FieldFile, notes: list[str]) -> xr.DataArray:
-    """Bring a field onto the columns: as it is where the coordinates agree, else by linear interpolation."""
-    targets = {}
-    for name in [dim for dim in field.dims if dim != "time"]:
-        target, own = columns[name].astype(float), field[name].to_numpy().astype(float)
-        if name == "longitude":
-            target = target - 360.0 * np.round((target - own.mean()) / 360.0)
-        dim = "level" if name == "depth" else name
-        if target.dims == (dim,) and np.array_equal(target.to_numpy(), own):
-            field = field.drop_vars(name).rename({name: dim} if dim != name else {})
-            continue
-        targets[name] = _within(target, own, name, source, notes).drop_vars(list(target.coords), errors="ignore")
+    """Bring a field onto the columns: its own values along axes that it shares, else by linear interpolation.
+
+    Interpolating to coordinates that the field has would lose the values beside missing ones (0 x NaN is NaN).
+    """
+    targets = {name: _target(field, columns, name) for name in field.dims if name != "time"}
+    dims = [dim for target in targets.values() for dim in target.dims]
+    if len(dims) == len(set(dims)):  # axes of a grid; the coordinates of casts belong together
+        for name, target in list(targets.items()):
+            own = pd.Index(field[name].to_numpy().astype(float))
+            position = own.get_indexer(target.to_numpy(), method="nearest", tolerance=SAME_COORDINATE)
+            if (position >= 0).all():
+                field = field.isel({name: target.copy(data=position)}).drop_vars(name)
+                del targets[name]
+    targets = {name: _within(target, field[name].to_numpy(), name, source, notes) for name, target in targets.items()}
     if "time" in field.dims:
         field = _same_times(field, columns, source)
     result = field.interp(targets, method="linear") if targets else field
     return result.drop_vars([name for name in result.coords if name not in columns.coords or name in targets])
+
+
+def _target(field: xr.DataArray, columns: xr.Dataset, name: str) -> xr.DataArray:
+    """Coordinate of the columns at which the field is wanted, longitudes in the field's convention."""
+    target = columns[name].astype(float).drop_vars(list(columns[name].coords))
+    if name == "longitude":
+        return target - 360.0 * np.round((target - float(field[name].mean())) / 360.0)
+    return target
 
 
 def _within(target: xr.DataArray, own: np.ndarray, name: str, source: FieldFile, notes: list[str]) -> xr.DataArray:

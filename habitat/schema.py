@@ -28,6 +28,7 @@ _EXPECTED = {
     "dict_type": "a table",
     "model_type": "a table",
     "finite_number": "a finite number",
+    "string_too_short": "a text that is not empty",
 }
 
 

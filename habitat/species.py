@@ -6,7 +6,8 @@ Both the resting metabolic rate and the oxygen supply capacity follow ``value ex
 et al. 2020, Nature 585:557, doi:10.1038/s41586-020-2721-y). The four parameters (ln alpha, ln rate, E_alpha, E_rate)
 are jointly Gaussian, so ln Pcrit is Gaussian at every temperature and the chance of viability is one normal CDF.
 
-Temperatures are in situ in degC and partial pressures in kPa; both may be numbers, numpy, xarray or dask arrays.
+Temperatures are in situ in degC and partial pressures in kPa; both may be numbers, numpy
+arrays or xarray objects, lazy or not.
 """
 
 from collections.abc import Sequence
