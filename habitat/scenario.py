@@ -65,7 +65,9 @@ class Change:
         match = re.fullmatch(r"\s*((?>[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?))\s*(\S.*?)\s*", text)
         if match is None:
             raise UnitError(f"oxygen change '{text}'", expected='a number and a unit, for example "-10 umol/kg"')
-        oxygen_unit(match[2])
+        if oxygen_unit(match[2]).kind == "saturation":
+            found = f"oxygen change '{text}' is in percent"
+            raise UnitError(found, remedy="for a share of the oxygen concentration write {percent = -8}")
         return cls(float(match[1]), match[2])
 
 
@@ -112,7 +114,7 @@ def apply(columns: xr.Dataset, scenario: Scenario) -> xr.Dataset:
     Returns
     -------
     xarray.Dataset
-        The changed columns. Two more variables count samples: `clipped_samples`, whose oxygen would have become
+        The changed columns. Two more variables count samples: `clipped_samples`, whose oxygen came out
         negative and was set to 0, and `lost_samples`, for which the field gave no change. The attribute `notes` holds
         sentences about fields and profiles that end within the ocean.
 
@@ -132,7 +134,7 @@ def apply(columns: xr.Dataset, scenario: Scenario) -> xr.Dataset:
     changed = columns.assign(
         temperature=warmed.assign_attrs(columns["temperature"].attrs),
         oxygen=oxygen.clip(min=0.0).assign_attrs(columns["oxygen"].attrs),
-        clipped_samples=((oxygen < 0) & (columns["oxygen"] >= 0)).sum(),
+        clipped_samples=(oxygen < 0).sum(),
         lost_samples=lost.sum(),
     )
     return changed.assign_attrs(notes=notes)

@@ -112,21 +112,23 @@ class Species:
         quantile : float
             Which quantile of what the trials leave uncertain; 0.5 is the estimate itself.
         """
-        x = self.inverse_temperature(temperature)
-        energy = self.resting_rate.activation_energy - self.supply_capacity.activation_energy
-        shift = ndtri(quantile) * self._log_sd(x) if quantile != 0.5 and self.covariance else 0.0
-        return self.resting_rate.value / self.supply_capacity.value * np.exp(energy * x + shift)
+        shift = 0.0
+        if quantile != 0.5 and self.covariance:
+            shift = ndtri(quantile) * self.log_pcrit_sd(temperature)
+        return self._pcrit(temperature, shift)
 
     def pcrit_of_draw(self, temperature: Any, draw: Sequence[float]) -> Any:
         """Critical oxygen partial pressure [kPa] of one draw of the physiology, see `draws`."""
-        log_shift, energy_shift = draw
-        return self.pcrit(temperature) * np.exp(log_shift + energy_shift * self.inverse_temperature(temperature))
+        return self._pcrit(temperature, *draw)
+
+    def _pcrit(self, temperature: Any, log_shift: Any, energy_shift: float = 0.0) -> Any:
+        energy = self.resting_rate.activation_energy - self.supply_capacity.activation_energy + energy_shift
+        ratio = self.resting_rate.value / self.supply_capacity.value
+        return ratio * np.exp(energy * self.inverse_temperature(temperature) + log_shift)
 
     def log_pcrit_sd(self, temperature: Any) -> Any:
         """Give the standard deviation of ln Pcrit [1], sqrt(g' C g) with g = (-1, 1, -x, x); 0 where none is known."""
-        return self._log_sd(self.inverse_temperature(temperature))
-
-    def _log_sd(self, x: Any) -> Any:
+        x = self.inverse_temperature(temperature)
         level, cross, slope = self._log_pcrit_covariance()
         return np.sqrt(np.maximum(level + 2.0 * cross * x + slope * x * x, 0.0))
 
@@ -152,7 +154,7 @@ class Species:
         deviation = self.log_pcrit_sd(temperature)
         return xr.apply_ufunc(_chance, po2, needed, deviation, dask="parallelized", output_dtypes=[float])
 
-    def draws(self, count: int = 64) -> np.ndarray:
+    def draws(self, count: int = 128) -> np.ndarray:
         """Quasi-random draws of what the trials leave uncertain.
 
         Only two combinations of the four parameters move Pcrit: ln(rate/alpha) at T0 and E_rate - E_alpha.

@@ -18,7 +18,7 @@ from habitat.species import Species
 TAILS = (0.05, 0.95)
 """Chances at which the outer and the inner edges of a band are drawn [1]."""
 
-COLUMNS_PER_BLOCK = 2**16
+COLUMNS_PER_BLOCK = 2**11
 """Columns worked on at a time, to bound memory."""
 
 # Nodes and weights for the mean over the quantiles at which the water between two samples is viable in part.
@@ -111,7 +111,7 @@ def column_totals(
 
 
 def drawn_totals(
-    columns: xr.Dataset, species: Species, activities: Sequence[float], *, count: int = 64, hydrostatic: bool = True
+    columns: xr.Dataset, species: Species, activities: Sequence[float], *, count: int = 128, hydrostatic: bool = True
 ) -> xr.Dataset:
     """Edges and thickness of each column for quasi-random draws of the physiology.
 
@@ -125,20 +125,19 @@ def drawn_totals(
     count : int
         Number of draws, a power of 2.
     """
-    shifts = species.draws(count)
+    draws = species.draws(count)
 
     def work(samples: Samples) -> np.ndarray:
-        x, pcrit = species.inverse_temperature(samples.temperature), species.pcrit(samples.temperature)
         results = np.empty((len(activities), count, samples.columns, len(DRAWN_QUANTITIES)))
-        for i, (log_shift, energy_shift) in enumerate(shifts):
-            drawn = pcrit * np.exp(log_shift + energy_shift * x)
+        for i, draw in enumerate(draws):
+            drawn = species.pcrit_of_draw(samples.temperature, draw)
             for j, activity in enumerate(activities):
                 bands = find_bands(samples, samples.po2 - activity * drawn)
                 results[j, i] = np.stack(totals(bands, samples.columns)[:3], axis=-1)
         return results
 
     extra = {"activity": list(activities), "draw": range(count)}
-    return _reduce(columns, work, extra, DRAWN_QUANTITIES, hydrostatic)
+    return _reduce(columns, work, extra, DRAWN_QUANTITIES, hydrostatic, np.float32)  # many draws: half the memory
 
 
 def band_table(
@@ -161,10 +160,8 @@ def band_table(
         With the columns `BAND_COLUMNS`; rows in the order activity, column, depth.
     """
     names = [dim for dim in columns["oxygen"].dims if dim != "level"]
-    depth, po2, temperature, seabed = _kernel_arrays(columns, hydrostatic)
-    po2, temperature, depth = xr.broadcast(po2, temperature, depth)
-    _, seabed = xr.broadcast(po2.isel(level=0, drop=True), seabed)
-    samples = gather(*_as_rows(*(array.to_numpy() for array in (depth, po2, temperature, seabed))))
+    arrays = xr.broadcast(*_kernel_arrays(columns), exclude=["level"])
+    samples = _samples(*_as_rows(*(array.to_numpy() for array in arrays)), hydrostatic)
     places = _places(columns, names)
     tables = [_bands_at(samples, species, activity).join(places, on="column") for activity in activities]
     table = pd.concat(tables, ignore_index=True).assign(species=species.name, scenario=scenario)
@@ -174,22 +171,36 @@ def band_table(
 # --- from columns to the kernel and back -------------------------------------------------------------------------
 
 
-def _kernel_arrays(columns: xr.Dataset, hydrostatic: bool) -> list[xr.DataArray]:
-    """Depth, PO2, temperature and seabed, with `level` last.
+def _kernel_arrays(columns: xr.Dataset) -> list[xr.DataArray]:
+    """Oxygen, temperature, salinity, pressure and depth, with `level` last, and the seabed.
 
-    Depths and seabed that many columns share are not repeated here: that would fill the memory which lazy columns save.
+    Pressures, depths and seabed that many columns share are not repeated here: that would fill the memory which lazy
+    columns save.
     """
-    po2 = oxygen_pressure(columns, hydrostatic=hydrostatic)
+    dims = columns["oxygen"].dims
+    water = [columns[name].transpose(*dims) for name in ("oxygen", "temperature", "salinity")]
     seabed = columns["seabed_depth"] if "seabed_depth" in columns else xr.DataArray(np.nan)
-    return [columns["depth"], po2, columns["temperature"].transpose(*po2.dims), seabed]
+    return [*water, columns["pressure"], columns["depth"], seabed]
 
 
-def _as_rows(
-    depth: np.ndarray, po2: np.ndarray, temperature: np.ndarray, seabed: np.ndarray
-) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Lay depth, PO2 and temperature out as (columns, levels), and the seabed as (columns,)."""
-    rows = [np.broadcast_to(a, po2.shape).reshape(-1, po2.shape[-1]) for a in (depth, po2, temperature)]
-    return *rows, np.broadcast_to(seabed, po2.shape[:-1]).reshape(-1)
+def _as_rows(oxygen: np.ndarray, *others: np.ndarray) -> list[np.ndarray]:
+    """Lay the kernel's arrays out as (columns, levels), and the last one, the seabed, as (columns,)."""
+    *fields, seabed = others
+    rows = [np.broadcast_to(a, oxygen.shape).reshape(-1, oxygen.shape[-1]) for a in (oxygen, *fields)]
+    return [*rows, np.broadcast_to(seabed, oxygen.shape[:-1]).reshape(-1)]
+
+
+def _samples(
+    oxygen: np.ndarray,
+    temperature: np.ndarray,
+    salinity: np.ndarray,
+    pressure: np.ndarray,
+    depth: np.ndarray,
+    seabed: np.ndarray,
+    hydrostatic: bool,
+) -> Samples:
+    po2 = po2_from_concentration(oxygen, temperature, salinity, pressure, hydrostatic=hydrostatic)
+    return gather(depth, po2, temperature, seabed)
 
 
 def _reduce(
@@ -198,33 +209,36 @@ def _reduce(
     extra: dict[str, Sequence[float]],
     quantities: dict[str, tuple[str, str]],
     hydrostatic: bool,
+    dtype: type = float,
 ) -> xr.Dataset:
     """Apply `work` to blocks of columns; it returns (*extra, columns of the block, quantities)."""
     shape = tuple(len(values) for values in extra.values())
 
-    def kernel(depth: np.ndarray, po2: np.ndarray, temperature: np.ndarray, seabed: np.ndarray) -> np.ndarray:
-        lead, rows = po2.shape[:-1], _as_rows(depth, po2, temperature, seabed)
-        out = np.empty((*shape, len(rows[0]), len(quantities)))
-        for i in range(0, len(rows[0]), COLUMNS_PER_BLOCK):
-            block = slice(i, i + COLUMNS_PER_BLOCK)
-            samples = gather(*(array[block] for array in rows))
+    def kernel(*arrays: np.ndarray) -> np.ndarray:
+        lead, rows = arrays[0].shape[:-1], _as_rows(*arrays)
+        out = np.full((*shape, len(rows[0]), len(quantities)), np.nan, dtype=dtype)
+        # PO2 is computed here and not on the whole arrays, so that a block stays in the processor's cache, and only
+        # for columns that have oxygen: on 44 million cells, a third of them dry, that took 40 % off its time.
+        wet = np.flatnonzero(np.isfinite(rows[0]).any(axis=1))
+        for i in range(0, len(wet), COLUMNS_PER_BLOCK):
+            block = wet[i : i + COLUMNS_PER_BLOCK]
+            samples = _samples(*(array[block] for array in rows), hydrostatic)
             done = work(samples)
             done[..., np.bincount(samples.column, minlength=samples.columns) == 0, :] = np.nan
             out[..., block, :] = done
         return np.moveaxis(out.reshape(*shape, *lead, len(quantities)), range(len(shape)), range(-len(shape) - 1, -1))
 
-    arrays = _kernel_arrays(columns, hydrostatic)
     result = xr.apply_ufunc(
         kernel,
-        *arrays,
-        input_core_dims=[["level"]] * 3 + [[]],
+        *_kernel_arrays(columns),
+        input_core_dims=[["level"]] * 5 + [[]],
         output_core_dims=[[*extra, "quantity"]],
         dask="parallelized",
         dask_gufunc_kwargs={
             "output_sizes": dict(zip(extra, shape, strict=True)) | {"quantity": len(quantities)},
             "allow_rechunk": True,
         },
-        output_dtypes=[float],
+        output_dtypes=[dtype],
     )
     result = result.assign_coords({name: list(values) for name, values in extra.items()})
     lead_dims = [dim for dim in columns["oxygen"].dims if dim != "level"]

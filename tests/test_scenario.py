@@ -165,9 +165,9 @@ def test_oxygen_below_zero_is_set_to_zero_and_counted():
     assert (int(changed["clipped_samples"]), int(changed["lost_samples"])) == (1, 0)
 
 
-def test_oxygen_that_was_negative_before_is_not_counted_as_clipped():
+def test_oxygen_that_was_negative_before_is_counted_as_clipped():
     changed = apply(casts([0, 50], [200.0, -0.5]), Scenario("s", 1.0, "keep concentration"))
-    assert (changed["oxygen"].squeeze().values.tolist(), int(changed["clipped_samples"])) == ([200.0, 0.0], 0)
+    assert (changed["oxygen"].squeeze().values.tolist(), int(changed["clipped_samples"])) == ([200.0, 0.0], 1)
 
 
 def test_keep_aou_can_run_out_of_oxygen():

@@ -13,7 +13,7 @@ from habitat.ocean import roles
 from habitat.ocean.recognise import open_netcdf, reading_errors
 from habitat.ocean.vertical import downward
 
-CHUNK_SIZE = "32MiB"  # of the file's own numbers; the conversions hold about ten such blocks per thread at a time
+CHUNK_SIZE = "16MiB"  # of the file's own numbers; the conversions hold about ten such blocks per thread at a time
 UNIT_REMEDY = "give the variable an attribute units, for example '{unit}'"
 PART_HINT = "a variable for the {role} with a CF standard name (see the CF standard name table) and a unit"
 _DEGREES = {

@@ -9,7 +9,7 @@ from typing import Literal
 
 import xarray as xr
 
-from habitat.errors import InputError
+from habitat.errors import HabitatError, InputError
 from habitat.files import missing_file
 
 Kind = Literal["CSV table", "WHP-Exchange CTD cast", "WHP-Exchange bottle file", "netCDF grid", "netCDF profiles"]
@@ -64,7 +64,7 @@ def reading_errors(where: str) -> Iterator[None]:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore", xr.SerializationWarning)
             yield
-    except InputError:
+    except HabitatError:
         raise
     except (OSError, RuntimeError) as error:
         raise InputError(
