@@ -12,6 +12,7 @@ from habitat.errors import InputError, OutputError
 from habitat.files import atomic_path
 from habitat.gridfile import cf_dataset, write_grid
 from habitat.ocean import open_ocean
+from habitat.ocean.recognise import reading_errors
 from habitat.species import Species, read_species
 from habitat.viability import band_table, chance_of_viability, column_totals
 
@@ -47,18 +48,27 @@ def write_bands(
     Raises
     ------
     InputError, OutputError
-        An input cannot be used, or the output not be written; netCDF is asked for casts.
+        An input cannot be used, or the output not be written; netCDF is asked for casts, or a table is to hold what
+        only a grid can.
     """
     species = read_species(species_file)
+    if (uncertainty or chance) and (out is None or out.suffix != ".nc"):
+        raise InputError(
+            "--uncertainty and --chance add to a netCDF grid only",
+            remedy="add --out FILE.nc, or leave them out: a table has quantile edges in any case",
+        )
     if out is not None and not out.parent.is_dir():
         raise OutputError("the folder does not exist", where=str(out.parent), remedy="create it, or choose another")
     columns = open_ocean(ocean, choose=choose)
+    reading = reading_errors(", ".join(columns.attrs["sources"]))  # lazy input fails only when it is read
     if out is not None and out.suffix == ".nc":
         if columns.attrs["form"] != "grid":
             raise InputError("casts have any number of bands each", where=str(out), expected="a .csv file for casts")
-        write_grid(_grid(columns, species, activities, hydrostatic, uncertainty, chance), out)
+        with reading:
+            write_grid(_grid(columns, species, activities, hydrostatic, uncertainty, chance), out)
         return
-    table = band_table(columns, species, activities, hydrostatic=hydrostatic)
+    with reading:
+        table = band_table(columns, species, activities, hydrostatic=hydrostatic)
     if out is not None:
         with atomic_path(out) as temporary:
             tables.write_csv(table, temporary)

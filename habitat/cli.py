@@ -1,5 +1,7 @@
 """The command line: doors only. Imports happen inside the commands, so that --help is instant."""
 
+import errno
+import os
 import signal
 import sys
 from pathlib import Path
@@ -28,7 +30,7 @@ def study(
         Path | None, typer.Option(help="Folder for the results, instead of the one the study names.")
     ] = None,
 ) -> None:
-    """Run a whole study and write tables, figures, methods and a record into one folder."""
+    """Run a study: tables, pictures, methods, record."""
     from habitat.study import run_study
 
     folder = run_study(study_file, out)
@@ -40,9 +42,7 @@ def study(
     "habitat bands grid.nc --species prawn.toml --out bands.nc --uncertainty"
 )
 def bands(
-    ocean: Annotated[
-        list[Path], typer.Argument(metavar="OCEAN...", help="Casts (CSV, WHP-Exchange) or a netCDF grid.")
-    ],
+    ocean: Annotated[list[Path], typer.Argument(metavar="OCEAN", help="Casts (CSV, WHP-Exchange) or a netCDF grid.")],
     species: Annotated[Path, typer.Option(metavar="S.toml", help="Species file.")],
     activity: Annotated[str, typer.Option(help="Activity factors, separated by commas.")] = "1",
     out: Annotated[
@@ -76,7 +76,7 @@ def inspect(
     salinity: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
     oxygen: Annotated[str | None, typer.Option(metavar="NAME", help=_CHOICE)] = None,
 ) -> None:
-    """Say what a file is, which variable plays which part, and what is missing or suspicious."""
+    """Say what a file holds and what is wrong with it."""
     from habitat.ocean import inspect as inspection
 
     print(inspection(file, choose=_chosen(temperature=temperature, salinity=salinity, oxygen=oxygen)))
@@ -114,18 +114,26 @@ def _options(
     pass
 
 
+def _stop(number: int, _frame: object) -> None:
+    """Leave in the ordinary way, so that unfinished output is removed."""
+    print("habitat: stopped before the end", file=sys.stderr)
+    sys.exit(128 + number)
+
+
 def main() -> None:
     """Run the command line; an error the user can cause is one message and exit status 1."""
-    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))  # so that unfinished output is removed
+    for number in (signal.SIGTERM, signal.SIGINT):
+        signal.signal(number, _stop)
+    sys.stdout.reconfigure(line_buffering=True)  # so that a full disk is met below, and not after the end
     try:
         app()
-    except KeyboardInterrupt:
-        print("habitat: interrupted; nothing was written", file=sys.stderr)
-        sys.exit(130)
     except Exception as error:
-        from habitat.errors import HabitatError
+        from habitat.errors import HabitatError, OutputError
 
+        if isinstance(error, OSError) and error.errno == errno.ENOSPC:  # only standard output is written unguarded
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())  # else Python tries again at its end
+            error = OutputError("the disk is full", where="standard output", remedy="free some space")
         if not isinstance(error, HabitatError):
-            raise
+            raise error
         print(f"habitat: {error}", file=sys.stderr)
         sys.exit(1)

@@ -1,5 +1,9 @@
 """Column totals on grids as CF-1.11 netCDF."""
 
+import errno
+import os
+import shutil
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -9,6 +13,9 @@ import xarray as xr
 from habitat.files import atomic_path
 
 CONVENTIONS = "CF-1.11"
+
+LITTLE_SPACE = 2**20
+"""A failed write with less than this left on the disk is taken as a full disk [bytes]."""
 
 FILL = np.float32(9.96921e36)
 
@@ -25,7 +32,11 @@ _COORDINATES = {
 def cf_dataset(totals: xr.Dataset, *, title: str, source: str, comment: str) -> xr.Dataset:
     """Add what CF-1.11 asks of a file to totals of grid columns; any further leading dimensions are kept."""
     result = totals.assign_attrs(
-        Conventions=CONVENTIONS, title=title, source=source, comment=comment, history="made in one run, see run.json"
+        Conventions=CONVENTIONS,
+        title=title,
+        source=source,
+        comment=comment,
+        history=f"written by habitat {version('habitat')}",  # no date: the same input gives the same bytes
     )
     for name, attributes in _COORDINATES.items():
         if name in result.coords:
@@ -54,4 +65,9 @@ def write_grid(dataset: xr.Dataset, path: str | Path) -> None:
     if "time" in dataset.coords and dataset["time"].dtype.kind in "MO":
         encoding["time"] = {"units": "days since 1950-01-01", "dtype": "float64", "_FillValue": None}
     with atomic_path(path) as temporary:
-        dataset.to_netcdf(temporary, engine="netcdf4", format="NETCDF4", encoding=encoding)
+        try:
+            dataset.to_netcdf(temporary, engine="netcdf4", format="NETCDF4", encoding=encoding)
+        except RuntimeError as error:  # the netCDF library does not say why it failed
+            if shutil.disk_usage(temporary.parent).free < LITTLE_SPACE:
+                raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC)) from error
+            raise

@@ -1,5 +1,6 @@
 """The output folder of a study: complete or absent."""
 
+import glob
 import json
 import os
 import shutil
@@ -19,17 +20,18 @@ def output_folder(target: str | Path) -> Iterator[Path]:
     """Give a temporary folder beside `target` to write to; put it in the place of `target` when the block ends well.
 
     When the block fails, or the program is stopped, the temporary folder is removed and `target` stays as it was. An
-    earlier result in `target` is replaced; other files that somebody put there are kept.
+    earlier result in `target` is replaced; other files that somebody put there are kept, under a name ending in
+    ``.kept`` where a result now has theirs.
 
     Raises
     ------
     OutputError
         `target` is a file, or a folder that holds other things than results, or cannot be written.
     """
-    target = Path(target).absolute()
-    _check(target)
+    target = Path(target).resolve()  # a link stays a link: the folder it leads to is replaced
     temporary = target.with_name(f".{target.name}.partial-{os.getpid()}")
     with output_errors(target):
+        _check(target)
         target.parent.mkdir(parents=True, exist_ok=True)
         _remove_abandoned(target)
         temporary.mkdir()
@@ -42,6 +44,10 @@ def output_folder(target: str | Path) -> Iterator[Path]:
 
 
 def _check(target: Path) -> None:
+    if os.path.ismount(target):
+        raise OutputError(
+            "this is a mount point, which cannot be replaced", where=str(target), remedy="choose a folder inside it"
+        )
     if target.is_dir():
         strangers = sorted(entry.name for entry in target.iterdir())
         if strangers and RECORD not in strangers:
@@ -51,16 +57,23 @@ def _check(target: Path) -> None:
                 where=str(target),
                 remedy="choose a new or empty folder with --out",
             )
-    elif target.exists():
-        raise OutputError("this is a file", where=str(target), expected="a folder", remedy="choose another with --out")
+    there = next(path for path in (target, *target.parents) if path.exists())
+    if not there.is_dir():
+        raise OutputError(
+            f"{there.name} is a file", where=str(target), expected="a folder", remedy="choose another with --out"
+        )
 
 
 def _remove_abandoned(target: Path) -> None:
-    """Remove what runs that were killed outright have left."""
-    for leftover in target.parent.glob(f".{target.name}.partial-*"):
-        number = leftover.name.rpartition("-")[2]
-        if number.isdigit() and not _is_running(int(number)):
-            shutil.rmtree(leftover, ignore_errors=True)
+    """Remove what runs that were killed outright have left, and put back what they had moved aside."""
+    for state in ("partial", "earlier"):
+        for leftover in target.parent.glob(f".{glob.escape(target.name)}.{state}-*"):
+            number = leftover.name.rpartition("-")[2]
+            if number.isdigit() and not _is_running(int(number)):
+                if state == "earlier":
+                    _settle(leftover, target)
+                else:
+                    shutil.rmtree(leftover, ignore_errors=True)
 
 
 def _is_running(process: int) -> bool:
@@ -74,26 +87,38 @@ def _is_running(process: int) -> bool:
 
 
 def _swap(temporary: Path, target: Path) -> None:
-    if not target.exists():
-        temporary.rename(target)
-        return
     earlier = target.with_name(f".{target.name}.earlier-{os.getpid()}")
-    ours = _results_in(target)
-    target.rename(earlier)
-    temporary.rename(target)
-    for entry in earlier.iterdir():
-        if entry.name not in ours and not (target / entry.name).exists():
-            entry.rename(target / entry.name)
+    try:
+        if target.exists():
+            target.rename(earlier)
+        temporary.rename(target)
+    finally:
+        if earlier.exists():
+            _settle(earlier, target)
+
+
+def _settle(earlier: Path, target: Path) -> None:
+    """End a swap: keep other people's files and drop the earlier results; put all back if nothing took their place."""
+    if not target.exists():
+        earlier.rename(target)
+        return
+    ours = _results_in(earlier)
+    for entry in earlier.rglob("*"):
+        name = entry.relative_to(earlier)
+        if name.as_posix() in ours or (entry.is_dir() and not entry.is_symlink()):
+            continue
+        place = target / name
+        place.parent.mkdir(parents=True, exist_ok=True)
+        entry.rename(place if not place.exists() else place.with_name(f"{place.name}.kept"))
     shutil.rmtree(earlier)
 
 
 def _results_in(folder: Path) -> set[str]:
-    """Top-level names that the record of an earlier run lists as its own."""
+    """Names of files that the record of an earlier run lists as its own."""
     record = folder / RECORD
     if not record.exists():
         return set()
     try:
-        listed = json.loads(record.read_text(encoding="utf-8"))["outputs"]
+        return {*json.loads(record.read_text(encoding="utf-8"))["outputs"], RECORD}
     except (ValueError, KeyError, TypeError):
-        listed = {}
-    return {Path(name).parts[0] for name in listed} | {RECORD}
+        return {RECORD}

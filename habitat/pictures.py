@@ -3,6 +3,7 @@
 import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from itertools import count
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +14,9 @@ from habitat import figures
 from habitat.regions import EARTH_RADIUS
 from habitat.studyfile import Animal, Study
 from habitat.viability import TAILS, oxygen_pressure
+
+LONGEST_NAME = 100
+"""Of a picture's file [characters]; different names that come out alike are numbered."""
 
 
 @dataclass(frozen=True)
@@ -73,7 +77,7 @@ def _cast_pictures(study: Study, oceans: Mapping[str, xr.Dataset], result: Resul
         profile = profiles.isel(cast=i)
         profile = profile.isel(level=np.isfinite(profile["depth"].values))
         picture = figures.profile_picture(profile, result.bands[result.bands["cast"] == cast], title=title)
-        figures.save(picture, folder / _name("profile", animal.species.name, cast))
+        figures.save(picture, _stem(folder, "profile", animal.species.name, cast))
 
 
 def _profiles(oceans: Mapping[str, xr.Dataset], animal: Animal, hydrostatic: bool) -> xr.Dataset:
@@ -112,23 +116,23 @@ def _section_pictures(study: Study, oceans: Mapping[str, xr.Dataset], result: Re
         if "seabed_depth" in columns:
             section["seabed_depth"] = columns["seabed_depth"]
         picture = figures.section_picture(section, title=title)
-        figures.save(picture, folder / _name("section", animal.species.name, scenario))
+        figures.save(picture, _stem(folder, "section", animal.species.name, scenario))
 
 
 def _station_maps(study: Study, columns: xr.Dataset, result: Results, folder: Path) -> Iterator[str]:
     animal = result.animal
     places = columns[["latitude", "longitude"]].to_dataframe().reset_index()[["cast", "latitude", "longitude"]]
-    baseline = next(iter(result.totals.values()))["thickness"]
+    baseline, before = next((scenario, totals["thickness"]) for scenario, totals in result.totals.items())
     for scenario, totals in result.totals.items():
         for i, activity in enumerate(animal.activities):
             title = f"{animal.species.name}, activity {activity:g}, {scenario}"
             yield title
             thickness = totals["thickness"].isel(activity=i).values
             shown = places.assign(thickness_m=thickness)
-            if totals["thickness"] is not baseline:
-                shown["change_m"] = thickness - baseline.isel(activity=i).values
+            if scenario != baseline:
+                shown["change_m"] = thickness - before.isel(activity=i).values
             picture = figures.station_map(shown, title=title, regions=study.regions)
-            figures.save(picture, folder / _name("map", animal.species.name, f"activity {activity:g}", scenario))
+            figures.save(picture, _stem(folder, "map", animal.species.name, f"activity {activity:g}", scenario))
 
 
 def _thickness_maps(study: Study, result: Results, folder: Path) -> Iterator[str]:
@@ -141,7 +145,7 @@ def _thickness_maps(study: Study, result: Results, folder: Path) -> Iterator[str
             yield title
             before = None if scenario == baseline else means[baseline].isel(activity=i)
             picture = figures.thickness_map(totals.isel(activity=i), before, title=title, regions=study.regions)
-            figures.save(picture, folder / _name("map", animal.species.name, f"activity {activity:g}", scenario))
+            figures.save(picture, _stem(folder, "map", animal.species.name, f"activity {activity:g}", scenario))
 
 
 def _mean_over_time(totals: xr.Dataset) -> xr.Dataset:
@@ -163,7 +167,10 @@ def _distance(columns: xr.Dataset) -> np.ndarray:
     return np.concatenate([[0.0], np.cumsum(2 * EARTH_RADIUS * np.arcsin(np.sqrt(half)))])
 
 
-def _name(*parts: str) -> str:
-    """File name of a picture: plain letters, digits, points and dashes."""
+def _stem(folder: Path, *parts: str) -> Path:
+    """Path of a picture without its ending: plain letters, digits, points and dashes, not long, and not yet taken."""
     words = (re.sub(r"[^\w.]+", "-", part, flags=re.ASCII).strip("-.").lower() for part in parts)
-    return "_".join(word for word in words if word)
+    name = "_".join(word for word in words if word)[:LONGEST_NAME]
+    taken = {path.stem for path in folder.iterdir()}
+    free = (candidate for number in count(2) if (candidate := f"{name}-{number}") not in taken)
+    return folder / (name if name not in taken else next(free))

@@ -9,9 +9,9 @@ import pandas as pd
 import xarray as xr
 
 from habitat import report, scenario, tables, viability
-from habitat.errors import InputError
 from habitat.gridfile import cf_dataset, write_grid
 from habitat.ocean import open_ocean
+from habitat.ocean.recognise import reading_errors
 from habitat.output import output_folder
 from habitat.pictures import Results, count_pictures, draw
 from habitat.progress import Steps, steps
@@ -94,16 +94,12 @@ def _compute(study: Study, name: str, columns: xr.Dataset) -> dict[str, Any]:
         )
     counts = xr.Dataset({key: columns[key] for key in ("clipped_samples", "lost_samples") if key in columns})
     counts.attrs = dict(columns.attrs)
-    try:
+    with reading_errors(", ".join(columns.attrs["sources"])):  # lazy netCDF input fails only when it is read
         done, counts = dask.compute(lazy, counts)
         for animal in study.animals:
             arguments = (columns, animal.species, animal.activities)
             table = viability.band_table(*arguments, scenario=name, hydrostatic=study.hydrostatic) if small else None
             done[animal.species.name] = (*done[animal.species.name], table)
-    except (OSError, RuntimeError) as error:  # lazy netCDF input fails only when it is read
-        raise InputError(
-            f"cannot be read ({error})", where=", ".join(columns.attrs["sources"]), remedy="the file may be damaged"
-        ) from None
     return done | {"counts": counts}
 
 
@@ -139,7 +135,8 @@ def _write_tables(
     tables.write_csv(table, folder / "findings.csv")
     tables.write_xlsx(table, tables.FINDINGS_COLUMNS, note, folder / "findings.xlsx")
     (folder / "findings.md").write_text(f"# {study.title}\n\n{tables.markdown(paged)}\n{note}\n", encoding="utf-8")
-    (folder / "findings.tex").write_text(f"% {study.title}\n% {note}\n{tables.latex(paged)}", encoding="utf-8")
+    title = " ".join(study.title.split())  # a second line would not be a comment
+    (folder / "findings.tex").write_text(f"% {title}\n% {note}\n{tables.latex(paged)}", encoding="utf-8")
     if all(result.bands is not None for result in results):
         bands = pd.concat([result.bands for result in results], ignore_index=True)
         tables.write_csv(bands, folder / "bands.csv")

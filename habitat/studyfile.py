@@ -1,5 +1,7 @@
 """The study file: one question, checked before any work begins."""
 
+import glob
+import math
 import os
 from dataclasses import dataclass
 from pathlib import Path
@@ -15,6 +17,9 @@ from habitat.schema import Table, validate
 from habitat.species import Species, read_species
 
 BASELINE = "baseline"
+
+LARGEST_WARMING = 40.0
+"""A warming, or cooling, of more than this is a mistake [degC]."""
 
 
 @dataclass(frozen=True)
@@ -131,7 +136,7 @@ class _Scenario(Table):
             return validate(_FieldFile, warming, "")
         if isinstance(warming, list):
             return _profile(warming)
-        if isinstance(warming, int | float) and not isinstance(warming, bool) and abs(warming) < 40:
+        if _is_number(warming) and abs(warming) < LARGEST_WARMING:
             return float(warming)
         msg = f"found {warming!r}; expected a number of degC, [[depth, degC], ...], or {{file = ..., variable = ...}}"
         raise ValueError(msg)
@@ -175,7 +180,7 @@ class _Region(Table):
 class _Output(Table):
     folder: str = "out"
     figures: bool = True
-    draws: int = Field(default=64, ge=8, le=4096)
+    draws: int = Field(default=128, ge=8, le=4096)
 
     @field_validator("draws")
     @classmethod
@@ -216,7 +221,7 @@ def read_study(path: str | Path) -> Study:
     return Study(
         title=table.title,
         file=path,
-        ocean_files=tuple(str(_resolved(beside, name)) for name in ocean.files),
+        ocean_files=tuple(_pattern(beside, name) for name in ocean.files),
         choose={role: name for role in ("temperature", "salinity", "oxygen") if (name := getattr(ocean, role))},
         keep_flags={key: flags for key, flags in ocean.keep_flags.model_dump().items() if flags is not None},
         hydrostatic=ocean.hydrostatic,
@@ -264,16 +269,23 @@ def _resolved(beside: Path, name: str) -> Path:
     return Path(os.path.normpath(beside / name))
 
 
+def _pattern(beside: Path, name: str) -> str:
+    """Resolve a path that may hold a pattern; brackets and stars in the folder of the study are none."""
+    return str(_resolved(Path(glob.escape(str(beside))) if glob.has_magic(name) else beside, name))
+
+
 def _profile(pairs: list[Any]) -> tuple[tuple[float, float], ...]:
-    try:
-        profile = tuple((float(depth), float(value)) for depth, value in pairs)
-    except (TypeError, ValueError):
-        profile = ()
-    depths = [depth for depth, _ in profile]
-    if not profile or depths != sorted(set(depths)) or depths[0] < 0:
+    known = all(isinstance(pair, list) and len(pair) == 2 and all(map(_is_number, pair)) for pair in pairs)
+    depths, values = zip(*pairs, strict=True) if known and pairs else ((), ())
+    increasing = list(depths) == sorted(set(depths)) and min(depths, default=-1) >= 0
+    if not increasing or max(map(abs, values)) >= LARGEST_WARMING:
         msg = f"found {pairs}; expected [[depth, degC], ...] with depths in m, from 0 or more, increasing"
         raise ValueError(msg)
-    return profile
+    return tuple((float(depth), float(value)) for depth, value in pairs)
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
 
 
 def _all_different(names: list[str], what: str, path: Path) -> None:

@@ -6,6 +6,7 @@ the animal's trials leave uncertain about the regional value itself.
 """
 
 import io
+import math
 from collections.abc import Mapping
 from pathlib import Path
 
@@ -80,16 +81,17 @@ def weighted_quantiles(values: np.ndarray, weights: np.ndarray, quantiles: np.nd
     numpy.ndarray
         Shape (k, ...); NaN where all values are.
     """
-    flat = values.reshape(-1, values.shape[-1])
+    lead = values.shape[:-1]
+    flat = values.reshape(math.prod(lead), values.shape[-1])
     result = np.full((len(quantiles), len(flat)), np.nan)
     for i, row in enumerate(flat):  # rows are draws or activities: few
         known = np.flatnonzero(~np.isnan(row))
         if known.size:
-            order = known[np.argsort(row[known], kind="stable")]
+            order = known[np.lexsort((weights[known], row[known]))]  # weights too, so that no other order matters
             weight = weights[order]
             position = (np.cumsum(weight) - weight / 2) / weight.sum()
             result[:, i] = np.interp(quantiles, position, row[order])
-    return result.reshape(len(quantiles), *values.shape[:-1])
+    return result.reshape(len(quantiles), *lead)
 
 
 def regional_findings(
@@ -251,7 +253,7 @@ def latex(table: pd.DataFrame) -> str:
 def write_xlsx(table: pd.DataFrame, meanings: Mapping[str, str], note: str, path: Path) -> None:
     """Write a table and a sheet with the meaning of its columns and a note; the same table gives the same bytes."""
     buffer = io.BytesIO()
-    book = xlsxwriter.Workbook(buffer, {"in_memory": True, "nan_inf_to_errors": False})
+    book = xlsxwriter.Workbook(buffer, {"in_memory": True, "strings_to_formulas": False, "strings_to_urls": False})
     book.set_properties({"created": pd.Timestamp("2000-01-01").to_pydatetime()})  # a clock would change the bytes
     head = book.add_format({"bold": True, "text_wrap": True, "valign": "top"})
     sheet = book.add_worksheet("findings")
