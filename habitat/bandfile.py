@@ -38,7 +38,7 @@ def write_bands(
     activities : sequence of float
         Activity factors [1].
     out : Path or None
-        A name ending in ``.nc`` for a grid as netCDF, any other for a CSV table; None for standard output: aligned on a
+        A name ending in ``.nc`` for a grid as netCDF, in ``.csv`` for a table; None for standard output: aligned on a
         terminal, CSV in a pipe.
     choose, hydrostatic
         See `habitat.ocean.open_ocean` and `habitat.viability.oxygen_pressure`.
@@ -52,7 +52,10 @@ def write_bands(
         only a grid can.
     """
     species = read_species(species_file)
-    if (uncertainty or chance) and (out is None or out.suffix != ".nc"):
+    ending = out.suffix.lower() if out is not None else None
+    if ending not in (None, ".csv", ".nc"):
+        raise OutputError(f"a name ending in '{ending}'", where=str(out), expected="a name ending in .csv or .nc")
+    if (uncertainty or chance) and ending != ".nc":
         raise InputError(
             "--uncertainty and --chance add to a netCDF grid only",
             remedy="add --out FILE.nc, or leave them out: a table has quantile edges in any case",
@@ -61,7 +64,7 @@ def write_bands(
         raise OutputError("the folder does not exist", where=str(out.parent), remedy="create it, or choose another")
     columns = open_ocean(ocean, choose=choose)
     reading = reading_errors(", ".join(columns.attrs["sources"]))  # lazy input fails only when it is read
-    if out is not None and out.suffix == ".nc":
+    if out is not None and ending == ".nc":
         if columns.attrs["form"] != "grid":
             raise InputError("casts have any number of bands each", where=str(out), expected="a .csv file for casts")
         with reading:

@@ -15,6 +15,10 @@ RECORD = "run.json"
 """The machine-readable record of a run; its presence says that a folder is one of ours and is complete."""
 
 
+PROGRAM = "habitat"
+"""Name by which a record is known to be ours."""
+
+
 @contextmanager
 def output_folder(target: str | Path) -> Iterator[Path]:
     """Give a temporary folder beside `target` to write to; put it in the place of `target` when the block ends well.
@@ -50,7 +54,7 @@ def _check(target: Path) -> None:
         )
     if target.is_dir():
         strangers = sorted(entry.name for entry in target.iterdir())
-        if strangers and RECORD not in strangers:
+        if strangers and not _outputs_of(target):
             listed = ", ".join(strangers[:3]) + (", ..." if len(strangers) > 3 else "")
             raise OutputError(
                 f"the folder holds other files ({listed}) and no earlier results",
@@ -102,7 +106,7 @@ def _settle(earlier: Path, target: Path) -> None:
     if not target.exists():
         earlier.rename(target)
         return
-    ours = _results_in(earlier)
+    ours = _outputs_of(earlier)
     for entry in earlier.rglob("*"):
         name = entry.relative_to(earlier)
         if name.as_posix() in ours or (entry.is_dir() and not entry.is_symlink()):
@@ -113,12 +117,10 @@ def _settle(earlier: Path, target: Path) -> None:
     shutil.rmtree(earlier)
 
 
-def _results_in(folder: Path) -> set[str]:
-    """Names of files that the record of an earlier run lists as its own."""
-    record = folder / RECORD
-    if not record.exists():
-        return set()
+def _outputs_of(folder: Path) -> set[str]:
+    """Names of the files that the record of an earlier run lists as its own; empty without such a record."""
     try:
-        return {*json.loads(record.read_text(encoding="utf-8"))["outputs"], RECORD}
-    except (ValueError, KeyError, TypeError):
-        return {RECORD}
+        record = json.loads((folder / RECORD).read_text(encoding="utf-8"))
+        return {*record["outputs"], RECORD} if record["program"]["name"] == PROGRAM else set()
+    except (OSError, ValueError, KeyError, TypeError):
+        return set()

@@ -14,7 +14,7 @@ import xarray as xr
 
 from habitat import bands, seawater, species
 from habitat.files import sha256
-from habitat.output import RECORD
+from habitat.output import PROGRAM, RECORD
 from habitat.regions import Region
 from habitat.scenario import Scenario, describe_oxygen, describe_warming
 from habitat.studyfile import Animal, Study
@@ -35,7 +35,7 @@ def run_record(study: Study, columns: xr.Dataset, scenarios: list[dict[str, Any]
     """
     return {
         "title": study.title,
-        "program": {"name": "habitat", "version": version("habitat")},
+        "program": {"name": PROGRAM, "version": version(PROGRAM)},
         "python": platform.python_version(),
         "libraries": {name: version(name) for name in LIBRARIES},
         "study": {"file": str(study.file), "sha256": sha256(study.file)},

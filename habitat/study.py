@@ -1,6 +1,7 @@
 """A study from its file to the finished output folder."""
 
 from collections.abc import Mapping
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -9,6 +10,7 @@ import pandas as pd
 import xarray as xr
 
 from habitat import report, scenario, tables, viability
+from habitat.findings import FINDINGS_COLUMNS, RegionalValues, findings_table, regional_values
 from habitat.gridfile import cf_dataset, write_grid
 from habitat.ocean import open_ocean
 from habitat.ocean.recognise import reading_errors
@@ -55,21 +57,20 @@ def run_study(path: str | Path, folder: str | Path | None = None) -> Path:
 
 def _run(study: Study, columns: xr.Dataset, folder: Path, progress: Steps) -> None:
     oceans = {BASELINE: columns}
-    computed = {}
     progress.step(BASELINE)
-    computed[BASELINE] = _compute(study, BASELINE, columns)
+    answers = {BASELINE: _answers(study, BASELINE, columns)}
     scenario_records = []
     for change in study.scenarios:
         progress.step(change.name)
         oceans[change.name] = scenario.apply(columns, change)
-        computed[change.name] = _compute(study, change.name, oceans[change.name])
-        counts = computed[change.name]["counts"]
+        answers[change.name] = _answers(study, change.name, oceans[change.name])
+        counts = oceans[change.name][["clipped_samples", "lost_samples"]].compute()
         effects = scenario.rule_effects(columns, change, hydrostatic=study.hydrostatic)
         scenario_records.append(report.scenario_record(change, counts, effects))
     progress.step("tables")
     record = report.run_record(study, columns, scenario_records)
-    results = [_results(animal, computed) for animal in study.animals]
-    _write_tables(study, columns, computed, results, record, folder)
+    results = [_results(animal, answers) for animal in study.animals]
+    _write_tables(study, columns, answers, results, record, folder)
     if study.figures:
         (folder / "figures").mkdir()
         for title in draw(study, oceans, results, folder / "figures"):
@@ -78,47 +79,54 @@ def _run(study: Study, columns: xr.Dataset, folder: Path, progress: Steps) -> No
     report.write_record(record, folder)
 
 
-def _compute(study: Study, name: str, columns: xr.Dataset) -> dict[str, Any]:
-    """Everything that one ocean gives for all animals, in one pass over lazy input.
+@dataclass(frozen=True)
+class _Answer:
+    """What one ocean gives for one animal; draws are kept as regional values only, for they fill the memory."""
 
-    Keys: "counts" (of the scenario) and each animal's name, with (totals, draws or None, band table or None).
-    """
-    lazy: dict[str, Any] = {}
-    small = columns.attrs["form"] == "casts" or _column_count(columns) <= LARGEST_BAND_TABLE
-    for animal in study.animals:
-        known = animal.species.covariance is not None
-        arguments = (columns, animal.species, animal.activities)
-        lazy[animal.species.name] = (
-            viability.column_totals(*arguments, uncertainty=known, hydrostatic=study.hydrostatic),
-            viability.drawn_totals(*arguments, count=study.draws, hydrostatic=study.hydrostatic) if known else None,
-        )
-    counts = xr.Dataset({key: columns[key] for key in ("clipped_samples", "lost_samples") if key in columns})
-    counts.attrs = dict(columns.attrs)
+    totals: xr.Dataset
+    values: RegionalValues
+    drawn: RegionalValues | None
+    bands: pd.DataFrame | None
+
+
+def _answers(study: Study, name: str, columns: xr.Dataset) -> dict[str, _Answer]:
+    """Name of each animal to what this ocean gives for it; lazy input is read once an animal."""
+    listed = columns.attrs["form"] == "casts" or _column_count(columns) <= LARGEST_BAND_TABLE
     with reading_errors(", ".join(columns.attrs["sources"])):  # lazy netCDF input fails only when it is read
-        done, counts = dask.compute(lazy, counts)
-        for animal in study.animals:
-            arguments = (columns, animal.species, animal.activities)
-            table = viability.band_table(*arguments, scenario=name, hydrostatic=study.hydrostatic) if small else None
-            done[animal.species.name] = (*done[animal.species.name], table)
-    return done | {"counts": counts}
+        return {animal.species.name: _answer(study, name, columns, animal, listed) for animal in study.animals}
+
+
+def _answer(study: Study, name: str, columns: xr.Dataset, animal: Animal, listed: bool) -> _Answer:
+    arguments = (columns, animal.species, animal.activities)
+    term = {"hydrostatic": study.hydrostatic}
+    uncertain = animal.species.covariance is not None
+    totals, drawn = dask.compute(
+        viability.column_totals(*arguments, uncertainty=uncertain, **term),
+        viability.drawn_totals(*arguments, count=study.draws, **term) if uncertain else None,
+    )
+    return _Answer(
+        totals=totals,
+        values=regional_values(columns, totals, study.regions),
+        drawn=None if drawn is None else regional_values(columns, drawn, study.regions),
+        bands=viability.band_table(*arguments, scenario=name, **term) if listed else None,
+    )
 
 
 def _column_count(columns: xr.Dataset) -> int:
     return columns["oxygen"].size // columns.sizes["level"]
 
 
-def _results(animal: Animal, computed: Mapping[str, Mapping[str, Any]]) -> Results:
-    name = animal.species.name
-    each = {ocean: done[name] for ocean, done in computed.items()}
-    listed = [table for _, _, table in each.values() if table is not None]
+def _results(animal: Animal, answers: Mapping[str, Mapping[str, _Answer]]) -> Results:
+    each = {ocean: given[animal.species.name] for ocean, given in answers.items()}
+    listed = [answer.bands for answer in each.values() if answer.bands is not None]
     table = pd.concat(listed, ignore_index=True) if listed else None
-    return Results(animal, {ocean: totals for ocean, (totals, _, _) in each.items()}, table)
+    return Results(animal, {ocean: answer.totals for ocean, answer in each.items()}, table)
 
 
 def _write_tables(
     study: Study,
     columns: xr.Dataset,
-    computed: Mapping[str, Mapping[str, Any]],
+    answers: Mapping[str, Mapping[str, _Answer]],
     results: list[Results],
     record: Mapping[str, Any],
     folder: Path,
@@ -126,14 +134,14 @@ def _write_tables(
     findings = []
     for result in results:
         name = result.animal.species.name
-        drawn = {ocean: done[name][1] for ocean, done in computed.items()}
-        drawn = None if any(draws is None for draws in drawn.values()) else drawn
-        findings.append(tables.regional_findings(columns, result.totals, drawn, list(study.regions), name))
+        given = {ocean: each[name] for ocean, each in answers.items()}
+        drawn = {ocean: answer.drawn for ocean, answer in given.items() if answer.drawn is not None}
+        findings.append(findings_table({ocean: answer.values for ocean, answer in given.items()}, drawn or None, name))
     table = pd.concat(findings, ignore_index=True)
     note = _note(study, record)
     paged = tables.report_table(table)
     tables.write_csv(table, folder / "findings.csv")
-    tables.write_xlsx(table, tables.FINDINGS_COLUMNS, note, folder / "findings.xlsx")
+    tables.write_xlsx(table, FINDINGS_COLUMNS, note, folder / "findings.xlsx")
     (folder / "findings.md").write_text(f"# {study.title}\n\n{tables.markdown(paged)}\n{note}\n", encoding="utf-8")
     title = " ".join(study.title.split())  # a second line would not be a comment
     (folder / "findings.tex").write_text(f"% {title}\n% {note}\n{tables.latex(paged)}", encoding="utf-8")

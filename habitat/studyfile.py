@@ -3,7 +3,7 @@
 import glob
 import math
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -11,6 +11,7 @@ from pydantic import Field, field_validator, model_validator
 
 from habitat.errors import InputError
 from habitat.files import nearest, read_toml
+from habitat.ocean.roles import ROLES
 from habitat.regions import EVERYWHERE, Region, box, read_polygons
 from habitat.scenario import KEEP_RULES, Change, FieldFile, Percent, Scenario
 from habitat.schema import Table, validate
@@ -92,6 +93,12 @@ class _Ocean(Table):
     temperature: str | None = None
     salinity: str | None = None
     oxygen: str | None = None
+    depth: str | None = None
+    pressure: str | None = None
+    latitude: str | None = None
+    longitude: str | None = None
+    time: str | None = None
+    seabed_depth: str | None = None
     keep_flags: _Flags = _Flags()
     hydrostatic: bool = True
 
@@ -213,7 +220,7 @@ def read_study(path: str | Path) -> Study:
     beside = path.parent
     animals = tuple(_animal(entry, beside) for entry in table.species)
     scenarios = tuple(_scenario(entry, beside, path) for entry in table.scenario)
-    regions = tuple(region for entry in table.region for region in _regions(entry, beside))
+    regions = tuple(region for entry in table.region for region in _regions(entry, path))
     _all_different([animal.species.name for animal in animals], "species", path)
     _all_different([BASELINE, *(scenario.name for scenario in scenarios)], "scenario", path)
     _all_different([region.name for region in regions], "region", path)
@@ -222,7 +229,7 @@ def read_study(path: str | Path) -> Study:
         title=table.title,
         file=path,
         ocean_files=tuple(_pattern(beside, name) for name in ocean.files),
-        choose={role: name for role in ("temperature", "salinity", "oxygen") if (name := getattr(ocean, role))},
+        choose={role: name for role in ROLES if (name := getattr(ocean, role, None))},
         keep_flags={key: flags for key, flags in ocean.keep_flags.model_dump().items() if flags is not None},
         hydrostatic=ocean.hydrostatic,
         animals=animals,
@@ -237,8 +244,9 @@ def read_study(path: str | Path) -> Study:
 def _animal(entry: _Animal, beside: Path) -> Animal:
     file = _resolved(beside, entry.file)
     species = read_species(file)
-    if entry.body_mass is not None:
+    if entry.body_mass is not None and entry.body_mass != species.body_mass:
         species = species.at_mass(entry.body_mass)
+        species = replace(species, name=f"{species.name}, {entry.body_mass:g} g")  # a study may ask for several masses
     return Animal(species, file, tuple(entry.activity))
 
 
@@ -258,10 +266,13 @@ def _scenario(entry: _Scenario, beside: Path, path: Path) -> Scenario:
     return Scenario(entry.name, resolved(entry.warming), oxygen)
 
 
-def _regions(entry: _Region, beside: Path) -> list[Region]:
+def _regions(entry: _Region, path: Path) -> list[Region]:
     if entry.box is not None:
-        return [box(entry.name, *entry.box)]
-    return read_polygons(_resolved(beside, str(entry.polygon)), entry.name)
+        try:
+            return [box(entry.name, *entry.box)]
+        except InputError as error:
+            raise InputError(error.found, where=f"{path}, {error.where}", expected=error.expected) from None
+    return read_polygons(_resolved(path.parent, str(entry.polygon)), entry.name)
 
 
 def _resolved(beside: Path, name: str) -> Path:

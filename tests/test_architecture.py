@@ -18,7 +18,7 @@ FLOORS = [
     {"seawater", "species"},
     {"ocean", "trials"},
     {"bands", "viability", "scenario"},
-    {"regions", "tables", "figures", "gridfile", "output", "progress"},
+    {"regions", "findings", "tables", "figures", "gridfile", "output", "progress"},
     {"studyfile"},
     {"report", "pictures"},
     {"study", "bandfile"},
@@ -31,7 +31,7 @@ WITHIN_A_FLOOR = {  # importer, imported
     ("schema", "errors"),
     ("schema", "files"),
     ("viability", "bands"),
-    ("tables", "regions"),
+    ("findings", "regions"),
     ("figures", "regions"),
     ("cli", "__init__"),
 }

@@ -21,7 +21,9 @@ def write_results(folder, **files):
         path.parent.mkdir(exist_ok=True)
         path.write_text(text)
     names = [name.replace("__", "/") for name in files]
-    (folder / RECORD).write_text(json.dumps({"outputs": dict.fromkeys(names, "checksum")}))
+    (folder / RECORD).write_text(
+        json.dumps({"program": {"name": "habitat"}, "outputs": dict.fromkeys(names, "checksum")})
+    )
 
 
 def run(target, **files):
@@ -82,13 +84,16 @@ def test_files_that_somebody_put_beside_results_are_kept(tmp_path):
     assert (target / "taken.kept").read_text() == "mine"
 
 
-@pytest.mark.parametrize("record", ["{", "[]", '{"outputs": 3}', "{}"])
-def test_with_a_damaged_record_every_other_file_is_kept(tmp_path, record):
+@pytest.mark.parametrize(
+    "record", ["{", "[]", '{"outputs": 3}', "{}", '{"program": {"name": "another"}, "outputs": {"findings": "1"}}']
+)
+def test_a_record_that_is_not_ours_protects_its_folder(tmp_path, record):
     target = tmp_path / "out"
     run(target, findings="1")
     (target / RECORD).write_text(record)
-    run(target, tables="2")
-    assert contents(target) == {"findings", "tables", RECORD}
+    with pytest.raises(OutputError, match=r"holds other files \(findings, run\.json\) and no earlier results"):
+        run(target, tables="2")
+    assert contents(target) == {"findings", RECORD}
 
 
 def test_a_link_to_a_folder_stays_a_link(tmp_path):
