@@ -58,7 +58,8 @@ def weighted_quantiles(values: np.ndarray, weights: np.ndarray, quantiles: np.nd
     """Quantiles of weighted values along the last axis, NaN left out.
 
     Each value stands at the middle of its share of the total weight, with linear interpolation between (with equal
-    weights the plotting positions of Hazen 1914, so that the median is the usual one).
+    weights the plotting positions of Hazen 1914, so that the median is the usual one). Equal values share their weight
+    evenly, so that the order of the input does not matter.
 
     Parameters
     ----------
@@ -80,10 +81,14 @@ def weighted_quantiles(values: np.ndarray, weights: np.ndarray, quantiles: np.nd
     for i, row in enumerate(flat):  # rows are draws or activities: few
         known = np.flatnonzero(~np.isnan(row))
         if known.size:
-            order = known[np.lexsort((weights[known], row[known]))]  # weights too, so that no other order matters
-            weight = weights[order]
-            position = (np.cumsum(weight) - weight / 2) / weight.sum()
-            result[:, i] = np.interp(quantiles, position, row[order])
+            order = known[np.argsort(row[known])]
+            ordered = row[order].astype(float)
+            first = np.flatnonzero(np.diff(ordered, prepend=np.nan) != 0)  # of each run of equal values
+            weight = np.add.reduceat(weights[order], first)
+            each = weight / np.diff(first, append=ordered.size)
+            total = np.cumsum(weight)
+            position = np.stack([total - weight + each / 2, total - each / 2], axis=1).ravel() / total[-1]
+            result[:, i] = np.interp(quantiles, position, np.repeat(ordered[first], 2))
     return result.reshape(len(quantiles), *lead)
 
 
@@ -172,7 +177,7 @@ def _summary(
         summary = {"viable_share": (viable * weight).sum(-1) / total}
     summary |= {"columns": known.sum(-1), "columns_without_data": (~known).sum(-1)}
     for name in EDGES:
-        low, middle, high = weighted_quantiles(here[name].astype(float), weight, [0.05, 0.5, 0.95])
+        low, middle, high = weighted_quantiles(here[name], weight, [0.05, 0.5, 0.95])
         summary |= {f"{name}_m": middle, f"{name}_m_columns_p05": low, f"{name}_m_columns_p95": high}
     if volume_weight is not None:
         summary["viable_volume_km3"] = (np.nan_to_num(thickness) * volume_weight).sum(-1)

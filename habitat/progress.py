@@ -45,8 +45,10 @@ class _LazyWork(Callback):
 @contextmanager
 def steps(total: int) -> Iterator[Steps]:
     """Show a bar of `total` steps on standard error while the block runs, if that is a terminal."""
-    console = Console(stderr=True)
     columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn())
-    progress = Progress(*columns, console=console, disable=not sys.stderr.isatty(), transient=True)
+    progress = Progress(*columns, console=Console(stderr=True), transient=True)
+    if not sys.stderr.isatty():  # a bar that is counted but never shown
+        yield Steps(progress, total)
+        return
     with progress, _LazyWork(progress):
         yield Steps(progress, total)

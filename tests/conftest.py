@@ -5,7 +5,10 @@ from pathlib import Path
 
 import dask
 import pytest
+import xarray as xr
 from hypothesis import HealthCheck, settings
+
+from habitat.ocean import gridded, open_ocean, opening
 
 REPOSITORY = Path(__file__).resolve().parents[1]
 
@@ -31,3 +34,23 @@ def no_compute():
         raise AssertionError("a lazy array was computed")
 
     return lambda: dask.config.set(scheduler=refuse)
+
+
+@pytest.fixture
+def damaged_grid(monkeypatch):
+    """Copy the example's grid to a path, sound in what is looked at first and damaged in a later step, kept lazy."""
+
+    def write(path: Path) -> None:
+        with xr.open_dataset(REPOSITORY / "profiles" / "example" / "halvane_grid.nc") as file:
+            whole = file.load()
+        chunks = {"chunksizes": (1, 36, 20, 20), "zlib": True, "fletcher32": True}
+        whole.to_netcdf(path, encoding=dict.fromkeys(("temperature", "salinity", "oxygen"), chunks))
+        content = bytearray(path.read_bytes())
+        middle = len(content) * 3 // 4
+        content[middle : middle + 2000] = bytes(2000)
+        path.write_bytes(content)
+        monkeypatch.setattr(opening, "LAZY_LIMIT", 0)
+        monkeypatch.setattr(gridded, "CHUNK_SIZE", "60KiB")  # one time step
+        open_ocean([path])  # the premise: what is looked at first is whole
+
+    return write

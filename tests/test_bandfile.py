@@ -13,7 +13,7 @@ import xarray as xr
 
 from habitat.bandfile import write_bands
 from habitat.errors import InputError, OutputError
-from habitat.ocean import gridded, open_ocean, opening
+from habitat.ocean import open_ocean, opening
 from habitat.species import read_species
 from habitat.viability import BAND_COLUMNS, band_table, chance_of_viability, column_totals
 
@@ -154,19 +154,9 @@ def test_a_folder_is_no_file_to_write(tmp_path, name):
 
 
 @pytest.mark.parametrize("name", ["t.csv", "g.nc"])
-def test_a_grid_damaged_in_a_later_step_is_told(tmp_path, monkeypatch, name):
+def test_a_grid_damaged_in_a_later_step_is_told(tmp_path, damaged_grid, name):
     source = tmp_path / "grid.nc"
-    with xr.open_dataset(GRID) as file:
-        whole = file.load()
-    chunks = {"chunksizes": (1, 36, 20, 20), "zlib": True, "fletcher32": True}
-    whole.to_netcdf(source, encoding=dict.fromkeys(("temperature", "salinity", "oxygen"), chunks))
-    content = bytearray(source.read_bytes())
-    middle = len(content) * 3 // 4
-    content[middle : middle + 2000] = bytes(2000)
-    source.write_bytes(content)
-    monkeypatch.setattr(opening, "LAZY_LIMIT", 0)
-    monkeypatch.setattr(gridded, "CHUNK_SIZE", "60KiB")  # one time step
-    open_ocean([source])  # the premise: what is looked at first is whole
+    damaged_grid(source)
     with pytest.raises(InputError, match=re.escape(f"{source}: cannot be read as netCDF")):
         write([source], tmp_path / name)
     assert os.listdir(tmp_path) == ["grid.nc"]

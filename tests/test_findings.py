@@ -24,7 +24,8 @@ some_numbers = st.lists(numbers, min_size=1, max_size=30)
 
 def slow_quantile(values, weights, quantile):
     """One quantile with loops, from the definition: each value at the middle of its share, straight lines between."""
-    pairs = sorted((v, w) for v, w in zip(values, weights, strict=True) if not math.isnan(v))
+    given = [(v, w) for v, w in zip(values, weights, strict=True) if not math.isnan(v)]
+    pairs = sorted((v, sum(w for u, w in given if u == v) / sum(u == v for u, _ in given)) for v, _ in given)
     total, before, places = sum(w for _, w in pairs), 0.0, []
     for value, weight in pairs:
         places.append(((before + weight / 2) / total, value))

@@ -15,7 +15,7 @@ import xarray as xr
 
 from habitat import study
 from habitat.errors import InputError, OutputError
-from habitat.ocean import gridded, opening
+from habitat.ocean import opening
 from habitat.study import run_study
 
 REPOSITORY = Path(__file__).resolve().parents[1]
@@ -357,20 +357,10 @@ def test_a_folder_of_other_files_is_refused_before_the_work(tmp_path, monkeypatc
         run_study(path, tmp_path / "mine")
 
 
-def test_a_grid_damaged_in_a_later_step_is_told_and_nothing_is_written(tmp_path, monkeypatch):
+def test_a_grid_damaged_in_a_later_step_is_told_and_nothing_is_written(tmp_path, damaged_grid):
     path = small_study(tmp_path, name="basin_grid.toml")
     source = tmp_path / "profiles" / "example" / "halvane_grid.nc"
-    with xr.open_dataset(source) as file:
-        whole = file.load()
-    chunks = {"chunksizes": (1, 36, 20, 20), "zlib": True, "fletcher32": True}
-    whole.to_netcdf(source, encoding=dict.fromkeys(("temperature", "salinity", "oxygen"), chunks))
-    content = bytearray(source.read_bytes())
-    middle = len(content) * 3 // 4
-    content[middle : middle + 2000] = bytes(2000)
-    source.write_bytes(content)
-    monkeypatch.setattr(opening, "LAZY_LIMIT", 0)
-    monkeypatch.setattr(gridded, "CHUNK_SIZE", "60KiB")  # one time step
-    opening.open_ocean([source])  # the premise: what is looked at first is whole
+    damaged_grid(source)
     with pytest.raises(InputError, match=r"halvane_grid\.nc: cannot be read as netCDF .*the file may be damaged"):
         run_study(path)
     assert not (path.parent / "out_grid").exists()

@@ -132,6 +132,7 @@ def _draw_edges(axes: Axes, x: float, own: pd.DataFrame) -> None:
     for side in ("upper", "lower"):
         ends = own[f"{side}_m"][own[f"{side}_edge"].isin(DATA_ENDS)]
         axes.hlines(ends, x - 0.45, x + 0.45, color="black", linestyle=":", linewidth=1)
-        reach = own[[f"{side}_m", f"{side}_m_p05", f"{side}_m_p95"]].agg(["min", "max"], axis=1)
+        edges = own[[f"{side}_m", f"{side}_m_p05", f"{side}_m_p95"]].astype(float)
+        reach = pd.DataFrame({"min": edges.min(axis=1), "max": edges.max(axis=1)})
         for low, high in reach[reach["min"] < reach["max"]].to_numpy():
             axes.plot([x, x], [low, high], color="black", linewidth=0.7, marker="_")
