@@ -69,6 +69,60 @@ def bands(
     )
 
 
+@app.command(
+    epilog="Examples: habitat trials rates.csv --species-name 'Veil prawn' --out prawn.toml --table trials.csv   "
+    "habitat trials traces.csv --chambers chambers.csv --species-name 'Veil prawn' --out prawn.toml --pictures pictures"
+)
+def trials(
+    trial_file: Annotated[Path, typer.Argument(metavar="TRIALS.csv", help="Table of rates, or raw oxygen traces.")],
+    species_name: Annotated[str, typer.Option(metavar="NAME", help="Name of the animal.")],
+    out: Annotated[Path, typer.Option(metavar="S.toml", help="Species file to write.")],
+    table: Annotated[Path | None, typer.Option(metavar="T.csv", help="Table to write, one row a trial.")] = None,
+    pictures: Annotated[Path | None, typer.Option(metavar="DIR", help="Folder for pictures, new or empty.")] = None,
+    chambers: Annotated[Path | None, typer.Option(metavar="C.csv", help="Chambers, if the trials are traces.")] = None,
+    window: Annotated[
+        str | None, typer.Option(metavar="SIZE", help="Of traces: '10 min' (the default), or of oxygen, '0.5 kPa'.")
+    ] = None,
+    settling: Annotated[float, typer.Option(metavar="HOURS", help="Left out at the start of each trial.")] = 0.0,
+    background_left: Annotated[
+        float, typer.Option(metavar="SHARE", help="Background still in the rates at a trial's end: its sd, of rest.")
+    ] = 0.0075,
+    supply: Annotated[str, typer.Option(help="joint, largest, three-largest or two-point.")] = "joint",
+    resting_rate: Annotated[
+        str, typer.Option(help="joint, rule, q0.1, q0.15, q0.2, q0.25, q0.3, low10, low10pc or mlnd.")
+    ] = "joint",
+    reference_temperature: Annotated[
+        float | None, typer.Option(metavar="DEGC", help="For the species file; the mean of the trials without it.")
+    ] = None,
+    supply_energy: Annotated[
+        str | None, typer.Option(metavar="EV,SD", help="If the trials have one temperature only.")
+    ] = None,
+    resting_energy: Annotated[
+        str | None, typer.Option(metavar="EV,SD", help="If the trials have one temperature only.")
+    ] = None,
+) -> None:
+    """Estimate a species file from respirometry trials.
+
+    Trials with live animals need the approval of an ethics committee.
+    """
+    from habitat.trialsjob import read_trials, write_trials
+
+    energies = {"supply_energy": supply_energy, "resting_energy": resting_energy}
+    write_trials(
+        read_trials(trial_file, chambers, window=window, settling_hours=settling),
+        species_name=species_name,
+        out=out,
+        table=table,
+        pictures=pictures,
+        sources=[path for path in (trial_file, chambers) if path is not None],
+        supply=supply,
+        resting=resting_rate,
+        background_sd=background_left,
+        reference_temperature=reference_temperature,
+        energies={name: _energy(text, name) for name, text in energies.items() if text is not None} or None,
+    )
+
+
 @app.command(epilog="Example: habitat inspect cruise_hy1.csv")
 def inspect(
     file: Annotated[Path, typer.Argument(metavar="FILE", help="An ocean file of any kind.")],
@@ -95,6 +149,18 @@ def _activities(text: str) -> list[float]:
         message = f"'{text}': expected different numbers above 0, separated by commas, for example 1,2.5"
         raise typer.BadParameter(message, param_hint="--activity")
     return factors
+
+
+def _energy(text: str, name: str) -> tuple[float, float]:
+    """Value and standard deviation of an activation energy [eV]."""
+    try:
+        value, deviation = (float(part) for part in text.split(","))
+    except ValueError:
+        value, deviation = float("nan"), float("nan")
+    if not (abs(value) < float("inf") and 0 <= deviation < float("inf")):
+        message = f"'{text}': expected a value and its standard deviation, for example 0.3,0.05"
+        raise typer.BadParameter(message, param_hint=f"--{name.replace('_', '-')}")
+    return value, deviation
 
 
 def _show_version(wanted: bool) -> None:

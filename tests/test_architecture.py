@@ -21,7 +21,7 @@ FLOORS = [
     {"regions", "findings", "tables", "figures", "gridfile", "output", "progress"},
     {"studyfile"},
     {"report", "pictures"},
-    {"study", "bandfile"},
+    {"study", "bandfile", "trialsjob"},
     {"cli", "__init__"},
 ]
 FLOOR_OF = {part: floor for floor, parts in enumerate(FLOORS) for part in parts}

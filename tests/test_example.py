@@ -57,6 +57,16 @@ def field():
 # --- the files ---------------------------------------------------------------------------------------------------
 
 
+def test_the_trials_are_made_again_the_same_and_say_that_they_are_invented(tmp_path):
+    spec = importlib.util.spec_from_file_location("make_trials", ROOT / "profiles" / "make_trials.py")
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    module.main(tmp_path)
+    committed = (EXAMPLES / "veil_prawn_trials.csv").read_text(encoding="utf-8")
+    assert (tmp_path / "veil_prawn_trials.csv").read_text(encoding="utf-8") == committed
+    assert "invented" in committed.splitlines()[0].lower()
+
+
 def test_the_generator_writes_the_committed_files(tmp_path):
     spec = importlib.util.spec_from_file_location("make_example", ROOT / "profiles" / "make_example.py")
     generator = importlib.util.module_from_spec(spec)
