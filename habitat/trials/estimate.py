@@ -119,8 +119,11 @@ def joint_estimate(
     spread = laplace_spread(observations.log_posterior, fit.limited_mode, observations.step, observations.prior_sd)
     draws = importance_sample(observations.log_posterior, fit.limited_mode, spread)
     quantities = _quantities(draws, observations.rate_scale, gain_sd)
-    never_limited = not _limit_is_clear(po2, fit.evidence, quantities)
-    if never_limited:
+    seen, reached = _limit_seen(po2, fit.evidence, quantities)
+    never_limited = not (seen and reached)
+    if seen and not reached:  # rest is known, and which observations were limited, but hardly by how much
+        quantities |= _only_bounds(quantities)
+    elif not seen:
         draws, bounds = _without_limit(observations, fit, draws)
         quantities = _quantities(draws, observations.rate_scale, gain_sd)
         quantities |= _only_bounds(_quantities(bounds, observations.rate_scale, gain_sd))
@@ -213,12 +216,12 @@ def _fit(observations: Observations) -> _Fit:
     return _Fit(mode, unlimited, height - without)
 
 
-def _limit_is_clear(po2: np.ndarray, evidence: float, quantities: dict[str, WithInterval]) -> bool:
-    """Whether the trial went from water where rest is free to water where it is not, beyond chance."""
+def _limit_seen(po2: np.ndarray, evidence: float, quantities: dict[str, WithInterval]) -> tuple[bool, bool]:
+    """Whether the trial left water where rest is free, beyond chance, and far enough to measure the limit."""
     enough = max(EVIDENCE_PER_OBSERVATION * po2.size, LEAST_EVIDENCE)
     offset, critical = quantities["sensor_offset"].value, quantities["critical_po2"]
-    reached = po2.min() + offset < CLEAR_MARGIN * critical.value
-    return bool(evidence >= enough and reached and critical.p975 < po2.max() + offset)
+    seen = evidence >= enough and critical.p975 < po2.max() + offset
+    return bool(seen), bool(po2.min() + offset < CLEAR_MARGIN * critical.value)
 
 
 def _without_limit(

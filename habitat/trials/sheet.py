@@ -15,6 +15,9 @@ from habitat.files import missing_file, nearest
 
 MISSING_WORDS = {"", "nan", "na", "n/a", "null", "none", "-", "--"}
 
+TEMPERATURE_LIMITS = (-3.0, 50.0)
+"""No aquatic animal is run outside [degC]."""
+
 TEMPERATURE_SPREAD = 5.0
 """A trial is run at one temperature; readings further apart than this are of two trials, or of two units [degC]."""
 
@@ -302,8 +305,17 @@ def check_trial(where: str, po2: np.ndarray, temperature: np.ndarray) -> None:
     Raises
     ------
     InputError
-        Temperatures are more than `TEMPERATURE_SPREAD` apart, or PO2 exceeds `LARGEST_PO2`.
+        Temperatures are beyond `TEMPERATURE_LIMITS` or more than `TEMPERATURE_SPREAD` apart, or PO2 exceeds
+        `LARGEST_PO2`.
     """
+    lowest, highest = TEMPERATURE_LIMITS
+    if temperature.min() < lowest or temperature.max() > highest:
+        raise InputError(
+            f"temperatures from {temperature.min():.4g} to {temperature.max():.4g} degC",
+            where=where,
+            expected=f"{lowest:g} to {highest:g} degC",
+            remedy="check the unit in the heading: are these kelvin, or degrees Celsius labelled K?",
+        )
     if np.ptp(temperature) > TEMPERATURE_SPREAD:
         raise InputError(
             f"temperatures from {temperature.min():.4g} to {temperature.max():.4g} degC in one trial",

@@ -130,3 +130,11 @@ def test_readings_that_are_of_no_single_trial():
 def test_settling_that_is_no_time(hours):
     with pytest.raises(InputError, match=r"settling period of .* h; expected hours, 0 or more"):
         check_settling(hours)
+
+
+@pytest.mark.parametrize("temperature", [283.15, -263.15])
+def test_kelvin_labelled_celsius_and_the_reverse_are_refused(temperature):
+    with pytest.raises(
+        InputError, match=rf"t: temperatures from {temperature:.4g} .* expected -3 to 50 degC; .*kelvin"
+    ):
+        check_trial("t", np.array([1.0, 2.0]), np.array([temperature, temperature]))
