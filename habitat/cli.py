@@ -89,7 +89,7 @@ def trials(
     ] = 0.0075,
     supply: Annotated[str, typer.Option(help="joint, largest, three-largest or two-point.")] = "joint",
     resting_rate: Annotated[
-        str, typer.Option(help="joint, rule, q0.1, q0.15, q0.2, q0.25, q0.3, low10, low10pc or mlnd.")
+        str, typer.Option(help="joint, rule, lowest-normal, lowest-ten, lowest-ten-per-cent or quantile-0.1 to -0.3.")
     ] = "joint",
     reference_temperature: Annotated[
         float | None, typer.Option(metavar="DEGC", help="For the species file; the mean of the trials without it.")

@@ -18,7 +18,7 @@ import gsw
 import numpy as np
 import xarray as xr
 
-from habitat.units import UMOL_PER_ML, oxygen_unit
+from habitat.units import UMOL_PER_ML, ZERO_CELSIUS, oxygen_unit
 
 OXYGEN_MOLE_FRACTION = 0.20946
 """Mole fraction of O2 in dry air [1] (Glueckauf 1951, as used by SCOR WG 142, doi:10.13155/45915)."""
@@ -31,9 +31,6 @@ PARTIAL_MOLAR_VOLUME = 0.317
 
 GAS_CONSTANT = 8.314
 """[J mol-1 K-1], to the digits of SCOR WG 142."""
-
-ZERO_CELSIUS = 273.15
-"""[K]"""
 
 IPTS68_PER_ITS90 = 1.00024
 """Ratio of a temperature on IPTS-68 to the same on ITS-90 [1] (Saunders 1990, WOCE Newsletter 10)."""

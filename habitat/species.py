@@ -25,13 +25,10 @@ from scipy.stats import qmc
 from habitat.errors import InputError
 from habitat.files import atomic_path, read_toml
 from habitat.schema import Table, validate
-from habitat.units import factor
+from habitat.units import ZERO_CELSIUS, factor
 
 BOLTZMANN = 8.617333262e-5
 """[eV/K] (CODATA 2018)"""
-
-ZERO_CELSIUS = 273.15
-"""[K]"""
 
 PARAMETERS = ("ln_supply_capacity", "ln_resting_rate", "supply_energy", "resting_energy")
 """Order of the rows and columns of a species' covariance."""

@@ -15,6 +15,9 @@ import pint
 
 from habitat.errors import UnitError
 
+ZERO_CELSIUS = 273.15
+"""[K]"""
+
 OXYGEN_MOLAR_MASS = 31.9988
 """Molar mass of O2 [g/mol]."""
 
@@ -194,7 +197,7 @@ def celsius(text: str) -> tuple[float, float]:
     if unit == registry.degC:
         return 1.0, 0.0
     if unit == registry.kelvin:
-        return 1.0, -273.15
+        return 1.0, -ZERO_CELSIUS
     if unit == registry.degF:
         return 5 / 9, -160 / 9
     raise UnitError(f"unit '{text}' is not one of temperature", expected="degC, K, ITS-90 or IPTS-68")

@@ -1,7 +1,8 @@
 """From trials to one row a trial and a species: which estimator is used where, and what is left out."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 import pandas as pd
@@ -17,8 +18,17 @@ JOINT = "joint"
 SUPPLY_ESTIMATORS = (JOINT, "largest", "three-largest", "two-point")
 """Ways to the supply capacity; all but the joint one are published or known, and give no interval."""
 
-RESTING_ESTIMATORS = (JOINT, "rule", "q0.1", "q0.15", "q0.2", "q0.25", "q0.3", "low10", "low10pc", "mlnd")
-"""Ways to the resting rate; all but the joint one are those of Chabot et al. 2016, J. Fish Biol. 88:81."""
+PUBLISHED_RESTS: Mapping[str, Callable[[np.ndarray], float]] = {
+    "rule": lambda rates: classic.resting_rate(rates)[0],
+    "lowest-normal": lambda rates: classic.lowest_normal(rates).mean,
+    "lowest-ten": classic.lowest_ten,
+    "lowest-ten-per-cent": classic.lowest_ten_per_cent,
+    **{f"quantile-{q:g}": partial(classic.resting_quantile, quantile=q) for q in (0.1, 0.15, 0.2, 0.25, 0.3)},
+}
+"""Estimators of the resting rate of Chabot et al. 2016, J. Fish Biol. 88:81."""
+
+RESTING_ESTIMATORS = (JOINT, *PUBLISHED_RESTS)
+"""Ways to the resting rate."""
 
 SAME_TEMPERATURE = 1.0
 """Trials of one individual this close in temperature share their observations of the resting rate [degC]."""
@@ -179,19 +189,7 @@ def _resting(
         raise InputError("no observation above Pcrit", where=f"trial '{own.name}'", remedy="use --resting-rate joint")
     few = f"the resting rate rests on {rates.size} observations over {hours:.1f} h"
     little = hours < ENOUGH_HOURS or rates.size < ENOUGH_POINTS
-    return _published_rest(rates, estimator), (f"{few}; 24 h or more are recommended",) if little else ()
-
-
-def _published_rest(rates: np.ndarray, estimator: str) -> float:
-    if estimator == "rule":
-        return classic.resting_rate(rates)[0]
-    if estimator == "mlnd":
-        return classic.lowest_normal(rates).mean
-    if estimator == "low10":
-        return classic.lowest_ten(rates)
-    if estimator == "low10pc":
-        return classic.lowest_ten_per_cent(rates)
-    return classic.resting_quantile(rates, float(estimator.removeprefix("q")))
+    return PUBLISHED_RESTS[estimator](rates), (f"{few}; 24 h or more are recommended",) if little else ()
 
 
 def _analysis(trial: Trial, joint: JointEstimate, supply: str, rest: float, notes: tuple[str, ...]) -> Analysis:

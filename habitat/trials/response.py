@@ -22,7 +22,8 @@ from scipy.optimize import minimize
 from scipy.stats import t as student
 
 from habitat.errors import InputError
-from habitat.species import BOLTZMANN, PARAMETERS, ZERO_CELSIUS, Response, Species
+from habitat.species import BOLTZMANN, PARAMETERS, Response, Species
+from habitat.units import ZERO_CELSIUS
 
 SAME_TEMPERATURE = 1.0
 """Trials closer than this are at one temperature, which tells nothing of the activation energy [degC]."""

@@ -87,21 +87,21 @@ def test_published_resting_rates_come_from_observations_above_pcrit(trials, rest
     assert free.size < own.rate.size
     wanted = {
         "rule": classic.resting_rate(free)[0],
-        "mlnd": classic.lowest_normal(free).mean,
-        "low10": classic.lowest_ten(free),
-        "low10pc": classic.lowest_ten_per_cent(free),
+        "lowest-normal": classic.lowest_normal(free).mean,
+        "lowest-ten": classic.lowest_ten(free),
+        "lowest-ten-per-cent": classic.lowest_ten_per_cent(free),
     }
-    quantile = np.quantile(free, float(resting[1:])) if resting.startswith("q") else None
+    quantile = np.quantile(free, float(resting.removeprefix("quantile-"))) if resting.startswith("quantile-") else None
     assert analysis.resting_rate == pytest.approx(wanted.get(resting, quantile))
 
 
 def test_an_individual_shares_its_observations_and_too_few_hours_are_said():
-    short = analyse([trial("one", hours=6.0), trial("two", seed=2, hours=6.0)], resting="q0.2")
+    short = analyse([trial("one", hours=6.0), trial("two", seed=2, hours=6.0)], resting="quantile-0.2")
     assert short[0].resting_rate == short[1].resting_rate  # one animal at one temperature
     assert "over 12.0 h; 24 h or more are recommended" in short[0].notes[0]
-    alone = analyse([trial("one"), trial("two", seed=2, individual="B")], resting="q0.2")
+    alone = analyse([trial("one"), trial("two", seed=2, individual="B")], resting="quantile-0.2")
     assert alone[0].resting_rate != alone[1].resting_rate
-    long = analyse([trial("one", hours=30.0)], resting="q0.2")
+    long = analyse([trial("one", hours=30.0)], resting="quantile-0.2")
     assert long[0].notes == ()
 
 
